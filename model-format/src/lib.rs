@@ -1,0 +1,24 @@
+//! The kilter model file and the one scorer.
+//!
+//! This crate is the bottom of kilter: the types of the model file with their JSON Schema, checks
+//! and fingerprint; column batches; the coding of records into terms; and the arithmetic that
+//! turns a record into probabilities. It knows no files, no clock and no network.
+
+pub mod batch;
+pub mod cells;
+pub mod check;
+pub mod coding;
+pub mod design;
+pub mod file;
+pub mod fingerprint;
+pub mod records;
+pub mod scorer;
+
+pub use batch::*;
+pub use check::{Fault, check};
+pub use coding::{Coded, Coder, Note, UNSEEN, near_miss};
+pub use design::{DenseColumn, Design, DesignError, Term};
+pub use file::*;
+pub use fingerprint::{ModelFileError, schema};
+pub use records::RecordReader;
+pub use scorer::{Scored, Scorer, log_probabilities_from_log_odds, probabilities_from_log_odds};

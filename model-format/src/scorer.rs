@@ -1,0 +1,245 @@
+//! The one scorer: probabilities of the categories for coded records.
+//!
+//! Files, posted records and the evaluation of a fit all come here, so the same record has the
+//! same probabilities to the last bit wherever it was scored.
+
+use crate::batch::{Batch, ColumnSpec, Refusal};
+use crate::coding::{Coded, Coder};
+use crate::design::{Design, DesignError};
+use crate::file::ModelFile;
+
+/// A model file made ready to score.
+#[derive(Debug, Clone)]
+pub struct Scorer {
+    coder: Coder,
+    design: Design,
+    categories: usize,
+    reference: usize,
+    /// Coefficients, terms x (J-1): the log-odds that each term adds, side by side.
+    by_term: Vec<f64>,
+    blocks: Vec<Block>,
+}
+
+/// Terms that share their dense columns and level fields: one product of dense columns times one
+/// row of coefficients, looked up by the levels of the record.
+#[derive(Debug, Clone, PartialEq)]
+struct Block {
+    dense: Vec<usize>,
+    /// Fields whose levels select the row, and the number of levels of each.
+    level_fields: Vec<(usize, usize)>,
+    /// For each combination of levels the term that applies; `NO_TERM` where none does.
+    terms: Vec<u32>,
+}
+
+const NO_TERM: u32 = u32::MAX;
+
+/// Scored records of one batch.
+#[derive(Debug, Clone, PartialEq, Default)]
+pub struct Scored {
+    /// Number of categories J.
+    pub categories: usize,
+    /// Log-odds of each category but the reference against the reference, rows x (J-1), in model
+    /// order. NaN in refused rows.
+    pub log_odds: Vec<f64>,
+    /// Probabilities, rows x J, in model order; each row sums to one. NaN in refused rows.
+    pub probabilities: Vec<f64>,
+    /// The coded records: inputs, refused rows, notes.
+    pub coded: Coded,
+}
+
+impl Scored {
+    /// Probabilities of one row.
+    pub fn probabilities_of(&self, row: usize) -> &[f64] {
+        &self.probabilities[row * self.categories..(row + 1) * self.categories]
+    }
+
+    /// Log-odds of one row against the reference category.
+    pub fn log_odds_of(&self, row: usize) -> &[f64] {
+        let compared = self.categories - 1;
+        &self.log_odds[row * compared..(row + 1) * compared]
+    }
+
+    /// Index of the likeliest category of a row; the first of equals.
+    pub fn top_of(&self, row: usize) -> usize {
+        let probabilities = self.probabilities_of(row);
+        let mut top = 0;
+        for (category, probability) in probabilities.iter().enumerate() {
+            if *probability > probabilities[top] {
+                top = category;
+            }
+        }
+        top
+    }
+}
+
+impl Scorer {
+    /// Compiles a checked model file.
+    ///
+    /// # Errors
+    /// [`DesignError`] where fields and interactions make no design. The numbers of terms and
+    /// coefficients are the business of [`crate::check`]; a file that passes it can be scored.
+    pub fn new(model: &ModelFile) -> Result<Self, DesignError> {
+        let design = Design::of_model(model)?;
+        let rows: Vec<&[f64]> = model
+            .compared_categories()
+            .map(|category| model.coefficients.get(category).map_or(&[][..], Vec::as_slice))
+            .collect();
+        let coefficient = |term: usize, row: &&[f64]| row.get(term).copied().unwrap_or(0.0);
+        let by_term = (0..design.terms().len())
+            .flat_map(|term| rows.iter().map(move |row| coefficient(term, row)))
+            .collect();
+        Ok(Self {
+            coder: Coder::new(&model.fields),
+            blocks: blocks(&design),
+            design,
+            categories: model.outcome.categories.len(),
+            reference: model.reference_index(),
+            by_term,
+        })
+    }
+
+    /// The columns that a batch must have, in order; further columns may follow.
+    pub fn column_specs(&self) -> Vec<ColumnSpec> {
+        self.design.column_specs()
+    }
+
+    /// The design that records are coded into.
+    pub fn design(&self) -> &Design {
+        &self.design
+    }
+
+    /// Number of categories J.
+    pub fn categories(&self) -> usize {
+        self.categories
+    }
+
+    /// Index of the reference category.
+    pub fn reference(&self) -> usize {
+        self.reference
+    }
+
+    /// Scores all records of a batch.
+    pub fn score(&self, batch: &Batch) -> Scored {
+        let mut coded = self.coder.code(batch);
+        let compared = self.categories - 1;
+        let mut log_odds = vec![f64::NAN; coded.rows * compared];
+        let mut probabilities = vec![f64::NAN; coded.rows * self.categories];
+        let usable = coded.usable();
+        let mut values = vec![0.0; coded.values.len()];
+        let mut dense = vec![0.0; self.design.dense().len()];
+        let mut beyond = Vec::new();
+        for row in (0..coded.rows).filter(|&row| usable[row]) {
+            for (slot, column) in values.iter_mut().zip(&coded.values) {
+                *slot = column[row];
+            }
+            let odds = &mut log_odds[row * compared..(row + 1) * compared];
+            self.log_odds(&values, &mut dense, odds);
+            if odds.iter().all(|odd| odd.is_finite()) {
+                let target = &mut probabilities[row * self.categories..(row + 1) * self.categories];
+                probabilities_from_log_odds(odds, self.reference, target);
+            } else {
+                odds.fill(f64::NAN);
+                let reason = "the log-odds of this record are too large to compute".to_owned();
+                beyond.push(Refusal { row, field: String::new(), reason });
+            }
+        }
+        if !beyond.is_empty() {
+            coded.refused.extend(beyond);
+            coded.refused.sort_by_key(|refusal| refusal.row);
+        }
+        Scored { categories: self.categories, log_odds, probabilities, coded }
+    }
+
+    /// Log-odds of one record against the reference category.
+    fn log_odds(&self, values: &[f64], dense: &mut [f64], log_odds: &mut [f64]) {
+        let compared = self.categories - 1;
+        self.design.fill_dense(values, dense);
+        log_odds.fill(0.0);
+        for block in &self.blocks {
+            let mut cell = 0;
+            for &(field, levels) in &block.level_fields {
+                cell = cell * levels + values[field] as usize;
+            }
+            let term = block.terms[cell];
+            if term == NO_TERM {
+                continue;
+            }
+            let factor: f64 = block.dense.iter().map(|&column| dense[column]).product();
+            let row = &self.by_term[term as usize * compared..][..compared];
+            for (sum, coefficient) in log_odds.iter_mut().zip(row) {
+                *sum += factor * coefficient;
+            }
+        }
+    }
+}
+
+/// Groups terms that differ only in their levels.
+fn blocks(design: &Design) -> Vec<Block> {
+    let level_count = |slot: usize| match &design.fields()[design.level_fields()[slot]] {
+        crate::file::Field::Levels(levels) => levels.levels.len(),
+        _ => 0,
+    };
+    let mut keys: Vec<(Vec<usize>, Vec<usize>)> = Vec::new();
+    let mut blocks: Vec<Block> = Vec::new();
+    for (index, term) in design.terms().iter().enumerate() {
+        let slots: Vec<usize> = term.levels.iter().map(|&(slot, _)| slot).collect();
+        let key = (term.dense.clone(), slots.clone());
+        let position = keys.iter().position(|known| *known == key).unwrap_or_else(|| {
+            let level_fields: Vec<(usize, usize)> =
+                slots.iter().map(|&slot| (design.level_fields()[slot], level_count(slot))).collect();
+            let cells = level_fields.iter().map(|&(_, levels)| levels).product();
+            blocks.push(Block { dense: term.dense.clone(), level_fields, terms: vec![NO_TERM; cells] });
+            keys.push(key);
+            blocks.len() - 1
+        });
+        let block = &mut blocks[position];
+        let cell = term
+            .levels
+            .iter()
+            .zip(&block.level_fields)
+            .fold(0, |cell, (&(_, level), &(_, levels))| cell * levels + level as usize);
+        block.terms[cell] = index as u32;
+    }
+    blocks
+}
+
+/// Probabilities of all categories from the log-odds against the reference category.
+///
+/// The largest log-odds (0 for the reference included) is subtracted before exponentials are
+/// taken, so nothing overflows; the sum is one up to rounding.
+///
+/// # Shapes
+/// `log_odds`: J-1, model order without the reference; `probabilities`: J, model order.
+pub fn probabilities_from_log_odds(log_odds: &[f64], reference: usize, probabilities: &mut [f64]) {
+    let largest = log_odds.iter().copied().fold(0.0, f64::max);
+    let mut sum = 0.0;
+    let mut compared = log_odds.iter();
+    for (category, slot) in probabilities.iter_mut().enumerate() {
+        let odds = if category == reference { 0.0 } else { compared.next().copied().unwrap_or(0.0) };
+        *slot = (odds - largest).exp();
+        sum += *slot;
+    }
+    for slot in probabilities {
+        *slot /= sum;
+    }
+}
+
+/// Natural logarithms of the probabilities of all categories: finite for finite log-odds, also
+/// where the probability itself underflows to 0.
+///
+/// # Shapes
+/// As [`probabilities_from_log_odds`].
+pub fn log_probabilities_from_log_odds(log_odds: &[f64], reference: usize, log_probabilities: &mut [f64]) {
+    let largest = log_odds.iter().copied().fold(0.0, f64::max);
+    let rest: f64 = log_odds.iter().map(|odds| (odds - largest).exp()).sum();
+    let log_sum = largest + ((-largest).exp() + rest).ln();
+    let mut compared = log_odds.iter();
+    for (category, slot) in log_probabilities.iter_mut().enumerate() {
+        let odds = if category == reference { 0.0 } else { compared.next().copied().unwrap_or(0.0) };
+        *slot = odds - log_sum;
+    }
+}
+
+#[cfg(test)]
+#[path = "scorer_tests.rs"]
+mod tests;
