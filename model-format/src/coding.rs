@@ -128,6 +128,29 @@ impl Coder {
         coded
     }
 
+    /// The values that are used for a record that was coded and scored before, from its inputs.
+    ///
+    /// # Shapes
+    /// `inputs` and `values`: one per field, as a row of [`Coded::inputs`] and [`Coded::values`].
+    pub fn values_of(&self, inputs: &[f64], values: &mut [f64]) {
+        for (((field, levels), input), value) in self.fields.iter().zip(&self.levels).zip(inputs).zip(values)
+        {
+            *value = match field {
+                Field::Number(number) if input.is_nan() => match number.missing {
+                    MissingNumber::Value(value) => value,
+                    MissingNumber::Refuse | MissingNumber::MeanAndFlag(_) => f64::NAN,
+                },
+                Field::Levels(field) if input.is_nan() => stand_in(&field.missing, field, levels),
+                Field::Levels(field) if *input == UNSEEN => stand_in(&field.unseen, field, levels),
+                Field::Flag(flag) if input.is_nan() => match flag.missing {
+                    MissingFlag::Value(value) => f64::from(u8::from(value)),
+                    MissingFlag::Refuse => f64::NAN,
+                },
+                Field::Number(_) | Field::Levels(_) | Field::Flag(_) => *input,
+            };
+        }
+    }
+
     /// Whether a bad cell makes its row useless: one of a field, or of the whole row.
     fn concerns(&self, field: &str) -> bool {
         field.is_empty() || self.fields.iter().any(|f| f.name() == field)
@@ -289,6 +312,11 @@ fn policy_level(policy: &str, field: &LevelsField, index: &HashMap<String, u32>)
     }
 }
 
+/// The level that a policy names as a value; NaN for `refuse`.
+fn stand_in(policy: &str, field: &LevelsField, index: &HashMap<String, u32>) -> f64 {
+    policy_level(policy, field, index).map_or(f64::NAN, f64::from)
+}
+
 /// The known name nearest to a text, where one is near enough to be a slip.
 pub fn near_miss<'a>(text: &str, known: impl IntoIterator<Item = &'a String>) -> Option<&'a str> {
     let folded = text.to_lowercase();
@@ -385,6 +413,11 @@ mod tests {
             let coder = Coder::new(&[dwelling(unseen, missing)]);
             let coded = coder.code(&Batch { rows: 4, columns: vec![texts(&cells)], bad_cells: vec![] });
             assert_eq!(coded.values[0], values);
+            let mut again = [0.0];
+            for row in 0..4 {
+                coder.values_of(&coded.input_row(row), &mut again);
+                assert_eq!(again[0], values[row], "from the inputs");
+            }
             assert_eq!(coded.inputs[0][2], UNSEEN);
             assert!(coded.inputs[0][3].is_nan());
             assert_eq!(coded.notes.len(), 2);

@@ -286,6 +286,12 @@ pub struct FitFigures {
     pub certificate: f64,
     /// Which standard errors the covariance holds.
     pub standard_errors: StandardErrors,
+    /// Number of clusters, where the standard errors are of that kind.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub clusters: Option<u64>,
+    /// Effective number of coefficients of a penalised fit.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub effective_parameters: Option<f64>,
     /// Ridge penalty; 0 for maximum likelihood.
     pub ridge: f64,
     /// `-2 log_likelihood + 2 parameters`.

@@ -1,0 +1,34 @@
+//! What a fit tells beside its coefficients.
+
+mod effects;
+mod field_tests;
+mod statistics;
+
+pub use effects::{Change, Effect};
+pub use field_tests::{Distribution, FieldTest, TestResult, Tested};
+pub use statistics::{FitStatistics, fit_statistics};
+
+use crate::estimate::Solution;
+use crate::fitted::Fitted;
+use crate::plan::Plan;
+use crate::resolve::Resolved;
+use crate::session::ErrorKind;
+use crate::table::Table;
+
+/// A fit with its rows at hand, for what needs another pass over them.
+pub struct Analysis<'a> {
+    /// The fitted model.
+    pub fitted: Fitted,
+    pub(crate) plan: Plan,
+    pub(crate) table: Table<'a>,
+    pub(crate) resolved: Resolved,
+    pub(crate) solution: Solution,
+    pub(crate) covariance: ErrorKind,
+}
+
+impl Analysis<'_> {
+    /// Number of categories but the reference.
+    fn compared(&self) -> usize {
+        self.resolved.category_weights.len() - 1
+    }
+}

@@ -1,0 +1,217 @@
+//! Maximum likelihood on a table: which terms stay, where the optimum is.
+
+use faer::Mat;
+
+use crate::alias::{Sweep, sweep};
+use crate::error::FitError;
+use crate::layout::Layout;
+use crate::likelihood::{Coefficients, Order, Sums, Workspace, add_chunk};
+use crate::linear::Factor;
+use crate::newton::{Evaluation, Iterate, Objective, Optimum, Stopped, maximise};
+use crate::resolve::Resolved;
+use crate::separation::{Margins, SeparationReport};
+use crate::table::Table;
+
+/// Largest number of coefficients: their information matrix then takes 72 megabytes.
+const MOST_COEFFICIENTS: usize = 3000;
+
+/// An optimum and the terms it is about.
+#[derive(Debug)]
+pub(crate) struct Solution {
+    /// The terms that stay.
+    pub(crate) layout: Layout,
+    /// The terms that were left out.
+    pub(crate) swept: Sweep,
+    pub(crate) optimum: Optimum,
+    /// Cross-products of all terms, up to a factor, in design order.
+    pub(crate) products: Mat<f64>,
+}
+
+impl Solution {
+    /// The coefficients as a pass needs them.
+    pub(crate) fn coefficients(&self) -> Coefficients {
+        let terms = self.layout.terms();
+        Coefficients::from_vector(&self.optimum.point, terms, self.optimum.point.len() / terms)
+    }
+}
+
+/// Fits all terms of a design by maximum likelihood.
+pub(crate) fn estimate(
+    table: &mut Table,
+    resolved: &Resolved,
+    watch: &mut dyn FnMut(u64, Iterate),
+) -> Result<Solution, FitError> {
+    let terms = resolved.design.terms().len();
+    let compared = resolved.category_weights.len() - 1;
+    if terms * compared > MOST_COEFFICIENTS {
+        let coefficients = terms * compared;
+        return Err(FitError::TooLarge { coefficients, terms, compared, most: MOST_COEFFICIENTS });
+    }
+    let mut layout = Layout::new(&resolved.design, &resolved.scaling, &vec![true; terms]);
+    let mut start = start_of(&resolved.category_weights, layout.order());
+    let (mut at, products) = Likelihood::new(table, &layout, resolved).evaluate_with_products(&start)?;
+    let products = in_design_order(&layout, &products);
+    let swept = sweep(products.as_ref());
+    if !swept.aliased.is_empty() {
+        let mut keep = vec![true; terms];
+        for aliased in &swept.aliased {
+            keep[aliased.column] = false;
+        }
+        layout = Layout::new(&resolved.design, &resolved.scaling, &keep);
+        start = start_of(&resolved.category_weights, layout.order());
+        at = Likelihood::new(table, &layout, resolved).evaluate(&start, Order::Information)?;
+    }
+    if at.not_finite > 0 {
+        return Err(FitError::NotFinite { rows: at.not_finite });
+    }
+    match maximise(&mut Likelihood::new(table, &layout, resolved), start, at, watch) {
+        Ok(optimum) => Ok(Solution { layout, swept, optimum, products }),
+        Err(stopped) => Err(explain(resolved, &layout, stopped)),
+    }
+}
+
+fn explain(resolved: &Resolved, layout: &Layout, stopped: Stopped) -> FitError {
+    match stopped {
+        Stopped::Failed(error) => error,
+        Stopped::Separated { direction, .. } => {
+            FitError::Separated(Box::new(SeparationReport::new(resolved, layout.order(), &direction)))
+        }
+        Stopped::NotPositive { row, steps } => {
+            let term = &resolved.design.terms()[layout.order()[row % layout.terms()]].name;
+            let category = resolved.category_names()[1 + row / layout.terms()];
+            FitError::NotUnique { iterations: steps, terms: format!("`{term}` of category `{category}`") }
+        }
+        Stopped::NotConverged { decrement, steps } => FitError::NotConverged { iterations: steps, decrement },
+    }
+}
+
+/// Fits a part of the terms, starting near the optimum of all of them.
+///
+/// Returns the optimum and how many terms it has. Terms that were left out because of terms that
+/// are now gone come in again.
+pub(crate) fn estimate_without(
+    table: &mut Table,
+    resolved: &Resolved,
+    full: &Solution,
+    gone: &[bool],
+) -> Result<(Layout, Optimum), FitError> {
+    let candidates: Vec<usize> = (0..gone.len()).filter(|&term| !gone[term]).collect();
+    let products = Mat::from_fn(candidates.len(), candidates.len(), |row, column| {
+        full.products[(candidates[row], candidates[column])]
+    });
+    let mut keep: Vec<bool> = gone.iter().map(|gone| !gone).collect();
+    for aliased in sweep(products.as_ref()).aliased {
+        keep[candidates[aliased.column]] = false;
+    }
+    let layout = Layout::new(&resolved.design, &resolved.scaling, &keep);
+    let start = full.start_without(&layout);
+    let at = Likelihood::new(table, &layout, resolved).evaluate(&start, Order::Information)?;
+    match maximise(&mut Likelihood::new(table, &layout, resolved), start, at, &mut |_, _| {}) {
+        Ok(optimum) => Ok((layout, optimum)),
+        Err(stopped) => Err(explain(resolved, &layout, stopped)),
+    }
+}
+
+impl Solution {
+    /// Where the optimum of a part of the terms lies if the log-likelihood is a parabola:
+    /// `b_r - V_rf V_ff^-1 b_f`, with f the terms that are gone.
+    fn start_without(&self, part: &Layout) -> Vec<f64> {
+        let (own, terms) = (self.layout.order(), self.layout.terms());
+        let position = |term: &usize| part.order().iter().position(|other| other == term);
+        let size = self.optimum.point.len();
+        let gone: Vec<usize> = (0..size).filter(|index| position(&own[index % terms]).is_none()).collect();
+        let covariance = &self.optimum.covariance;
+        let block = Mat::from_fn(gone.len(), gone.len(), |row, column| covariance[(gone[row], gone[column])]);
+        let point: Vec<f64> = gone.iter().map(|&index| self.optimum.point[index]).collect();
+        let pull =
+            Factor::new(block.as_ref()).map_or_else(|_| vec![0.0; gone.len()], |factor| factor.solve(&point));
+        let mut start = vec![0.0; part.terms() * (size / terms)];
+        for index in 0..size {
+            if let Some(position) = position(&own[index % terms]) {
+                let shift: f64 =
+                    gone.iter().zip(&pull).map(|(&other, pull)| covariance[(index, other)] * pull).sum();
+                start[index / terms * part.terms() + position] = self.optimum.point[index] - shift;
+            }
+        }
+        start
+    }
+}
+
+/// Coefficients of the model with intercepts only, category by category: `ln(n_j / n_0)`, then
+/// zeros. It is the optimum of that model.
+fn start_of(category_weights: &[f64], order: &[usize]) -> Vec<f64> {
+    let intercept = |weight: &f64| (weight / category_weights[0]).ln();
+    let block =
+        |weight: &f64| order.iter().map(|&term| if term == 0 { intercept(weight) } else { 0.0 }).collect();
+    category_weights[1..].iter().flat_map(|weight| -> Vec<f64> { block(weight) }).collect()
+}
+
+/// Cross-products of all terms in the order of the design.
+fn in_design_order(layout: &Layout, products: &Mat<f64>) -> Mat<f64> {
+    let size = layout.terms();
+    let mut internal = vec![0; size];
+    for (index, &term) in layout.order().iter().enumerate() {
+        internal[term] = index;
+    }
+    Mat::from_fn(size, size, |row, column| products[(internal[row], internal[column])])
+}
+
+/// The log-likelihood of the rows of a table.
+pub(crate) struct Likelihood<'s, 'a> {
+    table: &'s mut Table<'a>,
+    layout: &'s Layout,
+    compared: usize,
+    weight: f64,
+}
+
+impl<'s, 'a> Likelihood<'s, 'a> {
+    pub(crate) fn new(table: &'s mut Table<'a>, layout: &'s Layout, resolved: &Resolved) -> Self {
+        let compared = resolved.category_weights.len() - 1;
+        Self { table, layout, compared, weight: resolved.category_weights.iter().sum() }
+    }
+
+    fn sums(&mut self, point: &[f64], order: Order) -> Result<Sums, FitError> {
+        let coefficients = Coefficients::from_vector(point, self.layout.terms(), self.compared);
+        let layout = self.layout;
+        let sums = self.table.reduce(|chunk| {
+            let mut sums = Sums::new(layout, coefficients.compared, order);
+            add_chunk(&mut sums, &mut Workspace::default(), layout, &coefficients, chunk, order);
+            sums
+        })?;
+        Ok(sums.unwrap_or_else(|| Sums::new(layout, self.compared, order)))
+    }
+
+    /// Evaluation with intercepts only: then the probabilities are the same in all rows, and the
+    /// sum over pairs of categories is proportional to the cross-products of the terms.
+    fn evaluate_with_products(&mut self, start: &[f64]) -> Result<(Evaluation, Mat<f64>), FitError> {
+        let sums = self.sums(start, Order::Information)?;
+        Ok((evaluation(&sums, Order::Information), sums.all_pairs()))
+    }
+}
+
+fn evaluation(sums: &Sums, order: Order) -> Evaluation {
+    Evaluation {
+        value: sums.log_likelihood(),
+        gradient: if order >= Order::Gradient { sums.gradient() } else { Vec::new() },
+        information: if order >= Order::Information { sums.information() } else { Mat::new() },
+        longest_row: sums.longest_row(),
+        not_finite: sums.not_finite,
+    }
+}
+
+impl Objective for Likelihood<'_, '_> {
+    fn evaluate(&mut self, point: &[f64], order: Order) -> Result<Evaluation, FitError> {
+        Ok(evaluation(&self.sums(point, order)?, order))
+    }
+
+    fn separates(&mut self, direction: &[f64]) -> Result<bool, FitError> {
+        let direction = Coefficients::from_vector(direction, self.layout.terms(), self.compared);
+        let layout = self.layout;
+        let margins = self.table.reduce(|chunk| Margins::of(layout, &direction, chunk))?;
+        Ok(margins.is_some_and(Margins::separate))
+    }
+
+    fn weight(&self) -> f64 {
+        self.weight
+    }
+}

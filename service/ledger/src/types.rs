@@ -1,0 +1,178 @@
+//! What goes into the ledger and comes out of it.
+
+use kilter_drift::Summary;
+
+/// A scored record to be kept.
+#[derive(Debug, Clone, PartialEq)]
+pub struct NewRecord {
+    /// Its id, unique under the name of the model.
+    pub id: String,
+    /// Its time, microseconds since 1970-01-01T00:00:00Z.
+    pub time: i64,
+    /// Log-odds against the reference category, J-1 in model order.
+    pub log_odds: Vec<f64>,
+    /// One input per field, as [`kilter_model::Coded::inputs`] has them.
+    pub inputs: Vec<f64>,
+    /// One value per segment field of the model; empty where the record has none.
+    pub segments: Vec<String>,
+}
+
+/// Records scored by one version.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Records {
+    /// Name of the model.
+    pub model: String,
+    /// Fingerprint of the version that scored them.
+    pub version: String,
+    /// When they were received, microseconds since 1970.
+    pub received: i64,
+    /// The records.
+    pub records: Vec<NewRecord>,
+}
+
+/// An observed outcome.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct NewOutcome {
+    /// Id of its record.
+    pub id: String,
+    /// The category that was observed.
+    pub category: String,
+    /// When, microseconds since 1970; the moment of arrival where it is not known.
+    pub observed_at: Option<i64>,
+}
+
+/// Outcomes of records of one model.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Outcomes {
+    /// Name of the model.
+    pub model: String,
+    /// When they were received, microseconds since 1970.
+    pub received: i64,
+    /// The outcomes.
+    pub outcomes: Vec<NewOutcome>,
+}
+
+/// What became of an outcome.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub enum OutcomeState {
+    /// Its record was there.
+    Matched,
+    /// It waits for its record.
+    Waiting,
+    /// It was known already; nothing changed.
+    Repeated,
+    /// It replaced a former one.
+    Corrected,
+    /// It was not taken in, for this reason.
+    Refused(String),
+}
+
+/// What a version does.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum VersionState {
+    /// It answers.
+    Live,
+    /// It is scored beside the live version.
+    Shadow,
+    /// It is kept for the record.
+    Retired,
+}
+
+impl VersionState {
+    pub(crate) fn name(self) -> &'static str {
+        match self {
+            Self::Live => "live",
+            Self::Shadow => "shadow",
+            Self::Retired => "retired",
+        }
+    }
+
+    pub(crate) fn from_name(name: &str) -> Option<Self> {
+        [Self::Live, Self::Shadow, Self::Retired].into_iter().find(|state| state.name() == name)
+    }
+}
+
+/// A version of a model.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct VersionRow {
+    /// Name of the model.
+    pub model: String,
+    /// Fingerprint.
+    pub fingerprint: String,
+    /// Text of the model file.
+    pub file: String,
+    /// What it does.
+    pub state: VersionState,
+    /// When it was published, microseconds since 1970.
+    pub published_at: i64,
+}
+
+/// Which records of a version a summary is of.
+#[derive(Debug, Clone, PartialEq, Eq, PartialOrd, Ord, Hash)]
+pub enum Stream {
+    /// All of them.
+    All,
+    /// Those of one segment.
+    Segment {
+        /// The segment field.
+        field: String,
+        /// Its value.
+        value: String,
+    },
+}
+
+/// The summary of one window of one stream.
+#[derive(Debug, Clone, PartialEq)]
+pub struct WindowSummary {
+    /// The day, counted from 1970-01-01.
+    pub day: i64,
+    /// Which records.
+    pub stream: Stream,
+    /// Their summary.
+    pub summary: Summary,
+}
+
+/// A file that a worker starts on.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct FileStart {
+    /// Name of the model.
+    pub model: String,
+    /// SHA-256 of its content, hexadecimal.
+    pub sha256: String,
+    /// Its name as it came.
+    pub name: String,
+    /// The name under which its worker holds it.
+    pub claim: String,
+    /// The name of its results.
+    pub result: String,
+    /// When, microseconds since 1970.
+    pub started: i64,
+}
+
+/// What the ledger knows of a file's content.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct FileEntry {
+    /// Its name as it came first.
+    pub name: String,
+    /// The name under which its worker holds or held it.
+    pub claim: String,
+    /// The name of its results.
+    pub result: String,
+    /// When work on it began, microseconds since 1970.
+    pub started: i64,
+    /// When it was finished.
+    pub finished: Option<i64>,
+}
+
+/// A summary that is not what its records give.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct VerifyDifference {
+    /// Fingerprint of the version.
+    pub version: String,
+    /// The day, counted from 1970-01-01.
+    pub day: i64,
+    /// Which records.
+    pub stream: Stream,
+    /// What differs.
+    pub reason: String,
+}

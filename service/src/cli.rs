@@ -1,0 +1,189 @@
+//! The command line.
+
+use std::path::PathBuf;
+
+use clap::{Args, Parser, Subcommand, ValueEnum};
+
+/// Fit, serve and watch category models: multinomial logistic regression in production.
+#[derive(Debug, Parser)]
+#[command(name = "kilter", version, max_term_width = 100)]
+pub(crate) struct Cli {
+    #[command(subcommand)]
+    pub(crate) command: Command,
+}
+
+/// What to do.
+#[derive(Debug, Subcommand)]
+pub(crate) enum Command {
+    /// Play the whole job on the demo data: fit, publish, score, take in outcomes, report drift
+    Demo(DemoArgs),
+    /// Fit a model by maximum likelihood and write a model file
+    Fit(FitArgs),
+    /// Show what is in a model file
+    Show(ShowArgs),
+    /// Compare any two categories: log-odds of A against B with standard errors
+    Contrast(ContrastArgs),
+    /// Score a file
+    Score(ScoreArgs),
+    /// Run the HTTP service, the pages, the metrics and the drop folders
+    Serve(ServeArgs),
+    /// Score what lies in the drop folders once, and end
+    Sweep(ConfigArgs),
+    /// Take observed outcomes from a file into the ledger
+    Observe(ObserveArgs),
+    /// Report drift
+    Drift(DriftArgs),
+    /// Make a model file a version of its name
+    Publish(PublishArgs),
+    /// Check model files against schema, arithmetic and fingerprint
+    Check(CheckArgs),
+    /// Print a JSON Schema
+    Schema(SchemaArgs),
+}
+
+/// Where the configuration is.
+#[derive(Debug, Args)]
+pub(crate) struct ConfigArgs {
+    /// Configuration file; paths in it are relative to it
+    #[arg(long, default_value = "kilter.toml", value_name = "FILE")]
+    pub(crate) config: PathBuf,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct DemoArgs {
+    /// Folder for the demo's files; it is made, and must be empty or a former demo's
+    #[arg(long, default_value = "kilter-demo", value_name = "DIR")]
+    pub(crate) dir: PathBuf,
+    /// Keep the service and its pages up afterwards
+    #[arg(long)]
+    pub(crate) serve: bool,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct FitArgs {
+    /// Plan file (TOML): data, outcome, fields
+    pub(crate) plan: PathBuf,
+    /// Model file to write [default: NAME.model.json beside the plan]
+    #[arg(short, long, value_name = "MODEL")]
+    pub(crate) output: Option<PathBuf>,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct ShowArgs {
+    /// Model file
+    pub(crate) model: PathBuf,
+    /// Print JSON
+    #[arg(long)]
+    pub(crate) json: bool,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct ContrastArgs {
+    /// Model file
+    pub(crate) model: PathBuf,
+    /// Category A
+    pub(crate) category: String,
+    /// Category B, which A is compared against
+    pub(crate) against: String,
+    /// Print JSON
+    #[arg(long)]
+    pub(crate) json: bool,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct ScoreArgs {
+    /// Model file
+    pub(crate) model: PathBuf,
+    /// File to score (.csv, .csv.gz, .csv.zst, .parquet, .ndjson, .arrow); `-` is standard input (CSV)
+    pub(crate) input: PathBuf,
+    /// File to write; its extension gives its format [default: standard output, CSV]
+    #[arg(short, long, value_name = "OUTPUT")]
+    pub(crate) output: Option<PathBuf>,
+    /// File for refused rows, each with line, field and reason
+    #[arg(long, value_name = "FILE")]
+    pub(crate) refused: Option<PathBuf>,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct ServeArgs {
+    #[command(flatten)]
+    pub(crate) config: ConfigArgs,
+    /// Only check the configuration, and end
+    #[arg(long)]
+    pub(crate) check: bool,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct ObserveArgs {
+    /// Name of the model
+    pub(crate) name: String,
+    /// File with the columns `id`, `category` and, if known, `observed_at`
+    pub(crate) input: PathBuf,
+    #[command(flatten)]
+    pub(crate) config: ConfigArgs,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct DriftArgs {
+    /// Name of the model
+    pub(crate) name: String,
+    /// First day of the report (record time, UTC) [default: 28 matured days before --to]
+    #[arg(long, value_name = "T")]
+    pub(crate) from: Option<String>,
+    /// Last day of the report, and the day from which maturity is counted [default: today]
+    #[arg(long, value_name = "T")]
+    pub(crate) to: Option<String>,
+    /// Only this segment field
+    #[arg(long, value_name = "FIELD")]
+    pub(crate) by: Option<String>,
+    /// Print JSON
+    #[arg(long)]
+    pub(crate) json: bool,
+    #[command(flatten)]
+    pub(crate) config: ConfigArgs,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct PublishArgs {
+    /// Model file
+    pub(crate) model: PathBuf,
+    /// What the version does
+    #[arg(long = "as", value_enum, default_value = "live")]
+    pub(crate) role: Role,
+    #[command(flatten)]
+    pub(crate) config: ConfigArgs,
+}
+
+/// What a version does.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub(crate) enum Role {
+    /// It answers
+    Live,
+    /// It is scored beside the live version on the same records
+    Shadow,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct CheckArgs {
+    /// Model files
+    #[arg(required = true)]
+    pub(crate) models: Vec<PathBuf>,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct SchemaArgs {
+    /// Which schema
+    #[arg(value_enum)]
+    pub(crate) of: SchemaOf,
+}
+
+/// What a schema describes.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub(crate) enum SchemaOf {
+    /// The model file
+    Model,
+    /// The plan file
+    Plan,
+    /// The configuration file
+    Config,
+}

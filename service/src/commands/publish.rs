@@ -1,0 +1,24 @@
+//! `kilter publish`: makes a model file a version of its name.
+
+use kilter_ledger::VersionState;
+
+use crate::cli::{PublishArgs, Role};
+use crate::clock::Clock;
+use crate::commands::{open_registry, read_version};
+use crate::config::Config;
+use crate::exit::Done;
+
+pub(crate) fn run(arguments: &PublishArgs) -> anyhow::Result<Done> {
+    let config = Config::read(&arguments.config.config)?;
+    let version = read_version(&arguments.model)?;
+    let registry = open_registry(&config)?;
+    let state = match arguments.role {
+        Role::Live => VersionState::Live,
+        Role::Shadow => VersionState::Shadow,
+    };
+    let who = std::env::var("USER").unwrap_or_else(|_| "command line".into());
+    registry.publish(&version, state, &who, Clock::System.now())?;
+    let role = if state == VersionState::Live { "live" } else { "shadow" };
+    println!("{} {} is {role}", version.model.name, version.fingerprint());
+    Ok(Done::Well)
+}

@@ -1,0 +1,9 @@
+//! kilter from outside: the built program and its public interfaces.
+
+mod architecture;
+mod commands;
+mod demo;
+mod drop_folder;
+mod fits;
+mod service;
+mod support;
