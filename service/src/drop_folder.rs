@@ -125,7 +125,7 @@ impl DropFolder {
                 Some(age) if age >= SETTLED => return Ok(true),
                 // A time of writing in the future says nothing; take the file as it is.
                 None => return Ok(true),
-                Some(age) => std::thread::sleep(SETTLED - age),
+                Some(age) => std::thread::sleep(SETTLED.saturating_sub(age)),
             }
         }
     }

@@ -80,6 +80,7 @@ pub(crate) fn report(error: &anyhow::Error) -> ExitCode {
     for hint in hints {
         eprintln!("{hint}");
     }
-    let wrong_use = error.chain().any(|cause| cause.downcast_ref::<WrongUse>().is_some());
+    // The chain shows what was wrapped; the error itself knows what it was wrapped in.
+    let wrong_use = error.is::<WrongUse>() || error.chain().any(<dyn std::error::Error>::is::<WrongUse>);
     ExitCode::from(if wrong_use { WRONG_USE } else { FAILED })
 }

@@ -23,6 +23,7 @@ mod pages;
 mod registry;
 mod scoring;
 mod tables;
+mod terminal;
 mod text_table;
 mod training;
 

@@ -40,7 +40,11 @@ impl Monitored {
                     known.insert(name, worst.unwrap_or_default());
                 }
                 Err(error) => {
-                    tracing::error!(model = name, cause = format!("{error:#}"), "drift could not be computed")
+                    tracing::error!(
+                        model = name,
+                        cause = format!("{error:#}"),
+                        "drift could not be computed"
+                    );
                 }
             }
         }

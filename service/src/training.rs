@@ -387,7 +387,9 @@ mod tests {
     fn term_sums_equal_the_definition() {
         let rows = [([1.0, 1e6], 1.0), ([2.0, 1e6 + 3.0], 2.0), ([5.0, 1e6 - 1.0], 1.0)];
         let mut sums = TermSums::new(2);
-        rows.iter().for_each(|(terms, weight)| sums.add(terms, *weight));
+        for (terms, weight) in &rows {
+            sums.add(terms, *weight);
+        }
         let all: Vec<[f64; 2]> =
             rows.iter().flat_map(|(terms, w)| std::iter::repeat_n(*terms, *w as usize)).collect();
         let mean = |k: usize| all.iter().map(|row| row[k]).sum::<f64>() / 4.0;

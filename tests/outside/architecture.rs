@@ -43,7 +43,7 @@ fn dependencies_point_one_way() {
         assert_eq!(siblings, arrows[package.name.as_str()], "crates that {} uses", package.name);
         for (guarded, owner) in ONLY {
             assert!(
-                !used.contains(guarded) || package.name.as_str() == *owner,
+                !used.contains(guarded) || package.name.as_str() == owner,
                 "{} uses {guarded}, which only {owner} may",
                 package.name
             );

@@ -78,7 +78,6 @@ impl From<rusqlite::Error> for LedgerError {
 }
 
 impl LedgerError {
-    #[expect(clippy::needless_pass_by_value, reason = "errors and texts are handed over as they are")]
     pub(crate) fn damaged(what: impl Into<String>, reason: impl std::fmt::Display) -> Self {
         Self::Damaged { what: what.into(), reason: reason.to_string() }
     }

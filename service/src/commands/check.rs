@@ -5,6 +5,7 @@ use kilter_model::{ModelFile, ModelFileError};
 
 use crate::cli::CheckArgs;
 use crate::exit::Done;
+use crate::terminal::say;
 
 pub(crate) fn run(arguments: &CheckArgs) -> anyhow::Result<Done> {
     let mut bad = false;
@@ -12,16 +13,18 @@ pub(crate) fn run(arguments: &CheckArgs) -> anyhow::Result<Done> {
         let text = std::fs::read_to_string(path)
             .with_context(|| format!("could not read model file `{}`", path.display()))?;
         match ModelFile::from_json(&text) {
-            Ok(model) => println!("{}: sound, {} {}", path.display(), model.name, model.fingerprint),
+            Ok(model) => {
+                say(format_args!("{}: sound, {} {}", path.display(), model.name, model.fingerprint))?;
+            }
             Err(ModelFileError::Faults(faults)) => {
                 bad = true;
                 for fault in faults {
-                    println!("{}: {fault}", path.display());
+                    say(format_args!("{}: {fault}", path.display()))?;
                 }
             }
             Err(error) => {
                 bad = true;
-                println!("{}: {error}", path.display());
+                say(format_args!("{}: {error}", path.display()))?;
             }
         }
     }

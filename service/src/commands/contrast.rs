@@ -7,6 +7,7 @@ use super::show::{LEVEL, estimate_as_json, estimates_as_table};
 use crate::cli::ContrastArgs;
 use crate::commands::read_model;
 use crate::exit::{Done, WrongUse};
+use crate::terminal::say;
 
 pub(crate) fn run(arguments: &ContrastArgs) -> anyhow::Result<Done> {
     let model = read_model(&arguments.model)?;
@@ -24,10 +25,10 @@ pub(crate) fn run(arguments: &ContrastArgs) -> anyhow::Result<Done> {
     if arguments.json {
         let terms: Vec<_> = estimates.iter().map(estimate_as_json).collect();
         let document = json!({ "category": category, "against": against, "terms": terms });
-        println!("{}", serde_json::to_string_pretty(&document)?);
+        say(serde_json::to_string_pretty(&document)?)?;
     } else {
-        println!("{category} against {against}");
-        print!("{}", estimates_as_table(&estimates.iter().collect::<Vec<&Estimate>>()));
+        say(format_args!("{category} against {against}"))?;
+        say(estimates_as_table(&estimates.iter().collect::<Vec<&Estimate>>()))?;
     }
     Ok(Done::Well)
 }

@@ -7,6 +7,7 @@ use crate::config::Config;
 use crate::drift_text;
 use crate::exit::{Done, WrongUse};
 use crate::monitor::{Question, Span, drift};
+use crate::terminal::say;
 
 pub(crate) fn run(arguments: &DriftArgs) -> anyhow::Result<Done> {
     let span = Span::parse(arguments.from.as_deref(), arguments.to.as_deref())
@@ -25,9 +26,9 @@ pub(crate) fn run(arguments: &DriftArgs) -> anyhow::Result<Done> {
     let question = Question { model: &version.model, span, by: arguments.by.as_deref(), now };
     let report = drift(registry.ledger(), &question)?;
     if arguments.json {
-        println!("{}", serde_json::to_string_pretty(&report)?);
+        say(serde_json::to_string_pretty(&report)?)?;
     } else {
-        print!("{}", drift_text::report(&report));
+        say(drift_text::report(&report))?;
     }
     Ok(Done::Well)
 }

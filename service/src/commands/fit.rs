@@ -1,7 +1,7 @@
 //! `kilter fit`: fits a plan and writes a model file.
 
 use std::io::IsTerminal;
-use std::path::{Path, PathBuf};
+use std::path::Path;
 
 use anyhow::Context;
 use kilter_fit::{FitSettings, Fitted, Plan, Progress, fit};
@@ -9,6 +9,7 @@ use kilter_fit::{FitSettings, Fitted, Plan, Progress, fit};
 use crate::cli::FitArgs;
 use crate::durable::write_durably;
 use crate::exit::{Done, Hint, WrongUse};
+use crate::terminal::say;
 use crate::training::{TrainingRows, complete};
 
 /// Refused rows that are told on standard error.
@@ -16,14 +17,14 @@ const MOST_TOLD: usize = 10;
 
 pub(crate) fn run(arguments: &FitArgs) -> anyhow::Result<Done> {
     let plan = read_plan(&arguments.plan)?;
-    let folder = arguments.plan.parent().unwrap_or(Path::new(""));
+    let folder = arguments.plan.parent().filter(|folder| *folder != Path::new("")).unwrap_or(Path::new("."));
     let output = arguments.output.clone().unwrap_or_else(|| folder.join(format!("{}.model.json", plan.name)));
     let mut rows = TrainingRows::open(&plan, folder)?;
     let mut fitted = fit(&plan, &mut rows, FitSettings::default(), &mut |progress| tell(&progress))?;
     end_progress();
     complete(&plan, &mut rows, &mut fitted)?;
     write_model(&fitted, &output)?;
-    tell_result(&fitted, &output);
+    tell_result(&fitted, &output)?;
     Ok(Done::found(fitted.refused_rows > 0))
 }
 
@@ -40,7 +41,7 @@ fn read_plan(path: &Path) -> anyhow::Result<Plan> {
     })
 }
 
-fn write_model(fitted: &Fitted, output: &PathBuf) -> anyhow::Result<()> {
+fn write_model(fitted: &Fitted, output: &Path) -> anyhow::Result<()> {
     let mut model = fitted.model.clone();
     model.seal()?;
     write_durably(output, model.to_json()?.as_bytes())
@@ -71,7 +72,7 @@ fn end_progress() {
     }
 }
 
-fn tell_result(fitted: &Fitted, output: &Path) {
+fn tell_result(fitted: &Fitted, output: &Path) -> std::io::Result<()> {
     for refused in fitted.refused.iter().take(MOST_TOLD) {
         let field = if refused.field.is_empty() { String::new() } else { format!("`{}` ", refused.field) };
         eprintln!("row {}: {field}{}", refused.row + 1, refused.reason);
@@ -83,13 +84,14 @@ fn tell_result(fitted: &Fitted, output: &Path) {
         eprintln!("warning: {warning}");
     }
     if let Some(fit) = &fitted.model.fit {
-        println!(
+        say(format_args!(
             "{}: log-likelihood {:.4} on {} rows, {} steps; written to {}",
             fitted.model.name,
             fit.log_likelihood,
             fit.rows,
             fit.iterations,
             output.display()
-        );
+        ))?;
     }
+    Ok(())
 }

@@ -12,20 +12,21 @@ use crate::commands::{live_version, open_registry};
 use crate::config::Config;
 use crate::exit::Done;
 use crate::observing::{ReadOutcomes, Tally, outcome_specs};
+use crate::terminal::say;
 
 /// Refused rows that are told on standard error.
 const MOST_TOLD: usize = 10;
 
 pub(crate) fn run(arguments: &ObserveArgs) -> anyhow::Result<Done> {
     let total = take_in(arguments)?;
-    println!(
+    say(format_args!(
         "{} outcomes matched, {} wait for their record, {} known already, {} corrected, {} refused",
         total.matched,
         total.waiting,
         total.repeated,
         total.corrected,
         total.refused.len()
-    );
+    ))?;
     Ok(Done::found(!total.refused.is_empty()))
 }
 

@@ -7,6 +7,7 @@ use crate::clock::Clock;
 use crate::commands::{open_registry, read_version};
 use crate::config::Config;
 use crate::exit::Done;
+use crate::terminal::say;
 
 pub(crate) fn run(arguments: &PublishArgs) -> anyhow::Result<Done> {
     let config = Config::read(&arguments.config.config)?;
@@ -19,6 +20,6 @@ pub(crate) fn run(arguments: &PublishArgs) -> anyhow::Result<Done> {
     let who = std::env::var("USER").unwrap_or_else(|_| "command line".into());
     registry.publish(&version, state, &who, Clock::System.now())?;
     let role = if state == VersionState::Live { "live" } else { "shadow" };
-    println!("{} {} is {role}", version.model.name, version.fingerprint());
+    say(format_args!("{} {} is {role}", version.model.name, version.fingerprint()))?;
     Ok(Done::Well)
 }

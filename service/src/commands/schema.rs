@@ -3,6 +3,7 @@
 use crate::cli::{SchemaArgs, SchemaOf};
 use crate::config::Config;
 use crate::exit::Done;
+use crate::terminal::say;
 
 pub(crate) fn run(arguments: &SchemaArgs) -> anyhow::Result<Done> {
     let schema = match arguments.of {
@@ -10,6 +11,6 @@ pub(crate) fn run(arguments: &SchemaArgs) -> anyhow::Result<Done> {
         SchemaOf::Plan => kilter_fit::plan_schema(),
         SchemaOf::Config => schemars::schema_for!(Config).to_value(),
     };
-    println!("{}", serde_json::to_string_pretty(&schema)?);
+    say(serde_json::to_string_pretty(&schema)?)?;
     Ok(Done::Well)
 }

@@ -1,6 +1,6 @@
 //! `kilter serve`: the HTTP service, the pages, the metrics, the drop folders.
 
-use std::io::Write;
+use std::io::IsTerminal;
 use std::sync::Arc;
 
 use anyhow::Context;
@@ -14,12 +14,13 @@ use crate::config::{Config, LogFormat};
 use crate::exit::Done;
 use crate::http::{App, serve};
 use crate::metrics::Metrics;
+use crate::terminal::say;
 
 pub(crate) fn run(arguments: &ServeArgs) -> anyhow::Result<Done> {
     let config = Config::read(&arguments.config.config)?;
     ledger_url(&config)?;
     if arguments.check {
-        println!("{}: sound", arguments.config.config.display());
+        say(format_args!("{}: sound", arguments.config.config.display()))?;
         return Ok(Done::Well);
     }
     start_logging(&config);
@@ -42,12 +43,16 @@ async fn until_told_to_stop(config: Config) -> anyhow::Result<()> {
             _ = interrupt.recv() => {}
         }
     };
-    println!("listening on http://{}/", listener.local_addr()?);
-    if open {
-        println!("no tokens are configured: this machine only, and everyone on it may do everything");
+    let access = if open {
+        "\nno tokens are configured: this machine only, and everyone on it may do everything"
+    } else {
+        ""
+    };
+    let greeting = format!("listening on http://{}/{access}", listener.local_addr()?);
+    if let Err(error) = say(greeting) {
+        // Nobody reads standard output; that does not keep the service from its work.
+        tracing::warn!(%error, "standard output is closed");
     }
-    // Whoever started the service may wait for these lines.
-    std::io::stdout().flush()?;
     serve(app, listener, stop).await
 }
 
@@ -55,6 +60,7 @@ fn start_logging(config: &Config) {
     let builder = tracing_subscriber::fmt()
         .with_max_level(config.service.log.as_tracing())
         .with_writer(std::io::stderr)
+        .with_ansi(std::io::stderr().is_terminal())
         .with_target(false);
     let started = match config.service.log_format {
         LogFormat::Text => builder.try_init(),

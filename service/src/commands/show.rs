@@ -10,6 +10,7 @@ use crate::cli::ShowArgs;
 use crate::commands::read_model;
 use crate::drift_text::{percent, whole};
 use crate::exit::Done;
+use crate::terminal::say;
 use crate::text_table::{Align, Table};
 
 /// Level of the intervals that are shown.
@@ -19,9 +20,9 @@ pub(crate) fn run(arguments: &ShowArgs) -> anyhow::Result<Done> {
     let model = read_model(&arguments.model)?;
     let estimates = coefficients(&model, LEVEL)?;
     if arguments.json {
-        println!("{}", serde_json::to_string_pretty(&as_json(&model, &estimates))?);
+        say(serde_json::to_string_pretty(&as_json(&model, &estimates))?)?;
     } else {
-        print!("{}", as_text(&model, &estimates));
+        say(as_text(&model, &estimates))?;
     }
     Ok(Done::Well)
 }

@@ -7,6 +7,7 @@ use crate::config::Config;
 use crate::drop_folder::DropFolder;
 use crate::exit::{Done, WrongUse};
 use crate::metrics::Metrics;
+use crate::terminal::say;
 
 pub(crate) fn run(arguments: &ConfigArgs) -> anyhow::Result<Done> {
     let config = Config::read(&arguments.config)?;
@@ -20,10 +21,10 @@ pub(crate) fn run(arguments: &ConfigArgs) -> anyhow::Result<Done> {
     for drop in &config.drop {
         let folder = DropFolder::new(drop, config.resolve(&drop.folder));
         let swept = folder.sweep(&registry, &metrics, Clock::System)?;
-        println!(
+        say(format_args!(
             "{}: {} files, {} of them not scored; {} rows scored, {} refused",
             drop.model, swept.files, swept.not_scored, swept.scored_rows, swept.refused_rows
-        );
+        ))?;
         findings |= swept.not_scored > 0 || swept.refused_rows > 0;
     }
     Ok(Done::found(findings))

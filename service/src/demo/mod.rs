@@ -23,6 +23,7 @@ use crate::commands;
 use crate::config::Config;
 use crate::http::{App, serve};
 use crate::metrics::Metrics;
+use crate::terminal::say;
 
 /// The seed of the demo's stops.
 const SEED: u64 = 11;
@@ -51,7 +52,7 @@ every = \"10s\"
 pub(crate) fn play(folder: &Path, stay: bool) -> anyhow::Result<()> {
     prepare(folder)?;
     let round = Quillhaven::new(SEED)?;
-    println!("Quillhaven Parcels, an invented parcel round. Files are in {}.\n", folder.display());
+    say(format_args!("Quillhaven Parcels, an invented parcel round. Files are in {}.\n", folder.display()))?;
     fit_and_publish(folder, &round)?;
     let runtime = tokio::runtime::Builder::new_multi_thread().enable_all().build()?;
     runtime.block_on(play_with_service(folder.to_owned(), round, stay))
@@ -83,7 +84,7 @@ fn write(path: &Path, text: &str) -> anyhow::Result<()> {
 
 fn fit_and_publish(folder: &Path, round: &Quillhaven) -> anyhow::Result<()> {
     let weeks = &STORY[0];
-    heading(&format!("{}: {}", weeks.title, dates(round, weeks)));
+    heading(&format!("{}: {}", weeks.title, dates(round, weeks)))?;
     for (part, days) in [(1, 0..28), (2, 28..56)] {
         let stops: Vec<Stop> = days.flat_map(|day| round.day(day)).collect();
         write(&folder.join(format!("attempts-{part}.csv")), &csv(&stops, true))?;
@@ -121,7 +122,7 @@ async fn play_with_service(folder: PathBuf, round: Quillhaven, stay: bool) -> an
     let story = tokio::task::spawn_blocking(move || tell_story(&folder, &round, &Client::new(address)));
     let told = story.await?;
     if stay && told.is_ok() {
-        println!("The service stays up: http://{address}/ (end it with Ctrl-C)");
+        say(format_args!("The service stays up: http://{address}/ (end it with Ctrl-C)"))?;
         tokio::signal::ctrl_c().await?;
     }
     drop(stop);
@@ -136,8 +137,13 @@ fn tell_story(folder: &Path, round: &Quillhaven, client: &Client) -> anyhow::Res
         // The three ways in, in turn.
         let way = [Way::Json, Way::Drop, Way::Lines][number % 3];
         let counts = play_chapter(folder, round, client, days, way)?;
-        heading(&format!("{}: {}", chapter.title, dates(round, chapter)));
-        println!("{} stops {}, {} outcomes taken in", counts.records, way.in_words(), counts.outcomes);
+        heading(&format!("{}: {}", chapter.title, dates(round, chapter)))?;
+        say(format_args!(
+            "{} stops {}, {} outcomes taken in",
+            counts.records,
+            way.in_words(),
+            counts.outcomes
+        ))?;
         report(client, round, chapter)?;
     }
     Ok(())
@@ -257,14 +263,14 @@ fn report(client: &Client, round: &Quillhaven, chapter: &Chapter) -> anyhow::Res
     let report: Value = serde_json::from_str(&text).context("the drift report is no JSON")?;
     for finding in report["findings"].as_array().into_iter().flatten() {
         let word = |key: &str| finding[key].as_str().unwrap_or_default().to_owned();
-        println!("  {:<7} {}", word("severity"), word("sentence"));
+        say(format_args!("  {:<7} {}", word("severity"), word("sentence")))?;
     }
-    println!();
+    say("")?;
     Ok(())
 }
 
-fn heading(text: &str) {
-    println!("── {text}");
+fn heading(text: &str) -> std::io::Result<()> {
+    say(format_args!("── {text}"))
 }
 
 fn dates(round: &Quillhaven, chapter: &Chapter) -> String {

@@ -203,7 +203,9 @@ impl Quillhaven {
         let mut chances = scored.probabilities_of(0).to_vec();
         chances[1] *= safe_place_shift.exp();
         let total: f64 = chances.iter().sum();
-        chances.iter_mut().for_each(|chance| *chance /= total);
+        for chance in &mut chances {
+            *chance /= total;
+        }
         pick(random, &chances)
     }
 }

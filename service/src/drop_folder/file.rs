@@ -198,7 +198,7 @@ impl Work<'_> {
         };
         let taken =
             |name: &String| ["scored", "refused"].iter().any(|sub| self.folder.sub(sub).join(name).exists());
-        (1..).map(numbered).find(|name| !taken(name)).unwrap_or_default()
+        (1..=u32::MAX).map(numbered).find(|name| !taken(name)).unwrap_or_default()
     }
 
     fn score(&mut self, version: &Version, reader: TableReader, result: &str) -> Result<(), ScoringError> {

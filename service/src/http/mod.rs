@@ -10,6 +10,8 @@ mod pages;
 mod problem;
 mod records;
 mod serve;
+#[cfg(test)]
+mod tests;
 mod versions;
 
 pub(crate) use app::App;

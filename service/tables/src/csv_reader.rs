@@ -100,8 +100,8 @@ impl Source for CsvSource {
 /// The separator that stands most often in the head.
 fn separator_of(start: &[u8]) -> u8 {
     let head = start.split(|byte| *byte == b'\n').next().unwrap_or_default();
-    let count = |separator: &u8| head.iter().filter(|byte| *byte == separator).count();
-    SEPARATORS.into_iter().rev().max_by_key(|separator| count(separator)).unwrap_or(b',')
+    let cells = |separator: u8| head.split(|byte| *byte == separator).count();
+    SEPARATORS.into_iter().rev().max_by_key(|separator| cells(*separator)).unwrap_or(b',')
 }
 
 /// The record as text; the error names the first byte that is no UTF-8.

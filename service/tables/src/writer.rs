@@ -103,7 +103,7 @@ impl std::fmt::Debug for TableWriter {
 
 /// Where the rows go.
 enum Sink {
-    Csv(CsvWriter),
+    Csv(Box<CsvWriter>),
     Ndjson(BufWriter<Box<dyn Write + Send>>),
     /// Opened with the first batch, whose columns are its schema.
     NotOpened(Format, File),
@@ -258,7 +258,7 @@ impl TableWriter {
         }
         let failed = |error| TableError::write(&self.path, error);
         match self.sink {
-            Sink::Csv(writer) => end(writer).map_err(failed)?,
+            Sink::Csv(writer) => end(*writer).map_err(failed)?,
             Sink::Ndjson(mut stream) => stream.flush().map_err(failed)?,
             Sink::Parquet(writer) => {
                 writer.finish().map_err(|error| polars_failed(&self.path, &error))?;
@@ -354,7 +354,7 @@ fn text_sink(
     };
     let head: Vec<String> =
         names.iter().cloned().chain(appended.iter().map(|(name, _)| (*name).to_owned())).collect();
-    Ok(Some(Sink::Csv(csv_writer(stream, &head).map_err(failed)?)))
+    Ok(Some(Sink::Csv(Box::new(csv_writer(stream, &head).map_err(failed)?))))
 }
 
 /// A hidden name beside a file, for this process.

@@ -369,17 +369,11 @@ fn fit<'a>(document: &FitDocument, data: &DataPlan) -> Checked<'a, FitPlan> {
 fn monitor(document: &PlanDocument) -> Checked<'_, Monitor> {
     for (index, segment) in document.monitor.segments.iter().enumerate() {
         let place = [Step::Key("monitor"), Step::Key("segments"), Step::Index(index)];
-        let names: Vec<String> = document.field.iter().map(|field| field.name.clone()).collect();
-        match document.field.iter().find(|field| field.name == *segment) {
-            None => {
-                let reason = format!("`{segment}` is no field of the plan");
-                return Err(Objection::new(place, reason).near(segment, &names));
-            }
-            Some(field) if field.kind == FieldKind::Number => {
-                let reason = format!("`{segment}` is a number; segments are fields of levels or flags");
-                return Err(Objection::new(place, reason));
-            }
-            Some(_) => {}
+        // A segment need not be a field of the model: a record may carry it beside its fields.
+        let field = document.field.iter().find(|field| field.name == *segment);
+        if field.is_some_and(|field| field.kind != FieldKind::Levels) {
+            let reason = format!("`{segment}` is a number or a flag; segments are levels or other texts");
+            return Err(Objection::new(place, reason));
         }
     }
     Ok(Monitor {
