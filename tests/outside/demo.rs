@@ -64,9 +64,31 @@ fn the_demo_tells_its_chapters_apart() {
     let about_the_model = ["mix", "slope", "calibration", "log-loss", "segment"];
     assert!(!found.iter().any(|(kind, _)| about_the_model.contains(&kind.as_str())), "{found:?}");
 
+    the_tour_works(&round);
     // A folder that no demo made is left alone.
     assert_eq!(kilter(folder.path(), &["demo", "--dir", "."]).code, 2);
     assert!(round.join("attempt.model.json").exists());
+}
+
+/// The commands of the README's tour, as they stand there.
+fn the_tour_works(round: &Path) {
+    let readme = include_str!("../../README.md");
+    let tour = readme.split("<!-- tour -->").nth(1).and_then(|rest| rest.split("<!-- tour end -->").next());
+    let commands = tour.expect("a tour").lines().filter_map(|line| line.strip_prefix("kilter "));
+    let mut run = 0;
+    for command in commands {
+        let arguments: Vec<&str> = command.split_whitespace().collect();
+        let found = kilter(round, &arguments);
+        // Two of the rows to score are there to be refused.
+        let expected = i32::from(arguments[0] == "score");
+        assert_eq!(found.code, expected, "kilter {command}: {}", found.err);
+        run += 1;
+    }
+    assert_eq!(run, 6, "commands in the tour");
+    let refused = std::fs::read_to_string(round.join("refused.csv")).expect("refused rows");
+    assert!(
+        refused.contains("level 'barge' was not in the fit") && refused.contains("`heavy` is not a number")
+    );
 }
 
 /// Every coefficient within four standard errors of the truth; of 51 the largest distance exceeds

@@ -26,6 +26,15 @@ pub(crate) struct Sweep {
     pub(crate) nearly: Vec<usize>,
 }
 
+impl Sweep {
+    /// Leaves out columns of zeros only.
+    pub(crate) fn zeros(products: &Mat<f64>) -> Self {
+        let zeros = (0..products.nrows()).filter(|&column| products[(column, column)] <= 0.0);
+        let aliased = zeros.map(|column| Aliased { column, combination: Vec::new() }).collect();
+        Self { aliased, nearly: Vec::new() }
+    }
+}
+
 /// Goes through the columns of a cross-product matrix in order and leaves out each that the kept
 /// ones before it determine.
 ///

@@ -60,4 +60,32 @@ impl Chunk {
             ChunkColumn::Numbers(_) => &[],
         }
     }
+
+    /// Some of the rows, in the order given.
+    pub(crate) fn selected(&self, rows: &[usize]) -> Self {
+        fn pick<T: Copy>(values: &[T], rows: &[usize]) -> Vec<T> {
+            rows.iter().filter_map(|&row| values.get(row).copied()).collect()
+        }
+        let field = |column: &ChunkColumn| match column {
+            ChunkColumn::Numbers(numbers) => ChunkColumn::Numbers(pick(numbers, rows)),
+            ChunkColumn::Levels(levels) => ChunkColumn::Levels(pick(levels, rows)),
+        };
+        Self {
+            fields: self.fields.iter().map(field).collect(),
+            category: pick(&self.category, rows),
+            count: pick(&self.count, rows),
+            weight: pick(&self.weight, rows),
+            cluster: pick(&self.cluster, rows),
+            key: pick(&self.key, rows),
+        }
+    }
+
+    /// The rows of some categories, which are numbered anew in the order given.
+    pub(crate) fn of_categories(&self, categories: &[usize]) -> Self {
+        let number = |row: &usize| categories.iter().position(|&known| known == self.category[*row] as usize);
+        let rows: Vec<usize> = (0..self.rows()).filter(|row| number(row).is_some()).collect();
+        let mut selected = self.selected(&rows);
+        selected.category = rows.iter().filter_map(number).map(|category| category as u32).collect();
+        selected
+    }
 }

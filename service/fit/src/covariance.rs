@@ -9,7 +9,7 @@ use std::collections::HashMap;
 
 use faer::{Mat, MatRef};
 
-use crate::chunk::{Chunk, ChunkColumn};
+use crate::chunk::Chunk;
 use crate::cross::CrossProducts;
 use crate::error::FitError;
 use crate::estimate::Solution;
@@ -180,31 +180,12 @@ impl ClusterInformation {
         let of_cluster = |key: &u64| {
             let mut sums = Sums::new(layout, coefficients.compared, Order::Information);
             if let Some(rows) = rows.get(key) {
-                let part = selected(chunk, rows);
+                let part = chunk.selected(rows);
                 let work = &mut Workspace::default();
                 add_chunk(&mut sums, work, layout, coefficients, &part, Order::Information);
             }
             sums
         };
         Self(keys.iter().map(of_cluster).collect())
-    }
-}
-
-/// Some rows of a chunk.
-pub(crate) fn selected(chunk: &Chunk, rows: &[usize]) -> Chunk {
-    fn pick<T: Copy>(values: &[T], rows: &[usize]) -> Vec<T> {
-        rows.iter().filter_map(|&row| values.get(row).copied()).collect()
-    }
-    let field = |column: &ChunkColumn| match column {
-        ChunkColumn::Numbers(numbers) => ChunkColumn::Numbers(pick(numbers, rows)),
-        ChunkColumn::Levels(levels) => ChunkColumn::Levels(pick(levels, rows)),
-    };
-    Chunk {
-        fields: chunk.fields.iter().map(field).collect(),
-        category: pick(&chunk.category, rows),
-        count: pick(&chunk.count, rows),
-        weight: pick(&chunk.weight, rows),
-        cluster: pick(&chunk.cluster, rows),
-        key: pick(&chunk.key, rows),
     }
 }

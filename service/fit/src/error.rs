@@ -127,17 +127,21 @@ pub enum FitError {
         /// The column of the clusters.
         column: String,
     },
+    /// Too few cases of a category to cross-validate.
+    #[error(
+        "category `{category}` has too few cases for {folds}-fold cross-validation; give `fit.ridge` a number"
+    )]
+    TooFewForFolds {
+        /// The category.
+        category: String,
+        /// Number of folds.
+        folds: usize,
+    },
     /// A number is too large to compute with.
     #[error("the log-odds of {rows} rows are too large to compute; look for numbers of extreme size")]
     NotFinite {
         /// Number of rows.
         rows: u64,
-    },
-    /// Something that the plan asks for cannot be done yet.
-    #[error("`{key}` is not supported by this build yet")]
-    Unsupported {
-        /// Key of the plan.
-        key: &'static str,
     },
 }
 

@@ -1,8 +1,11 @@
 //! Maximum likelihood on a table: which terms stay, where the optimum is.
 
+use std::borrow::Cow;
+
 use faer::Mat;
 
 use crate::alias::{Sweep, sweep};
+use crate::chunk::Chunk;
 use crate::error::FitError;
 use crate::layout::Layout;
 use crate::likelihood::{Coefficients, Order, Sums, Workspace, add_chunk};
@@ -25,6 +28,22 @@ pub(crate) struct Solution {
     pub(crate) optimum: Optimum,
     /// Cross-products of all terms, up to a factor, in design order.
     pub(crate) products: Mat<f64>,
+    /// The log-likelihood itself, without a penalty.
+    pub(crate) log_likelihood: f64,
+    pub(crate) method: Method,
+}
+
+/// What the optimum is one of.
+#[derive(Debug)]
+pub(crate) enum Method {
+    MaximumLikelihood,
+    /// A penalised likelihood, with the effective number of each coefficient and the sampling
+    /// covariance, which ignores the bias.
+    Ridge {
+        rho: f64,
+        effective: Vec<f64>,
+        sampling: Mat<f64>,
+    },
 }
 
 impl Solution {
@@ -42,15 +61,10 @@ pub(crate) fn estimate(
     watch: &mut dyn FnMut(u64, Iterate),
 ) -> Result<Solution, FitError> {
     let terms = resolved.design.terms().len();
-    let compared = resolved.category_weights.len() - 1;
-    if terms * compared > MOST_COEFFICIENTS {
-        let coefficients = terms * compared;
-        return Err(FitError::TooLarge { coefficients, terms, compared, most: MOST_COEFFICIENTS });
-    }
+    check_size(resolved)?;
     let mut layout = Layout::new(&resolved.design, &resolved.scaling, &vec![true; terms]);
     let mut start = start_of(&resolved.category_weights, layout.order());
     let (mut at, products) = Likelihood::new(table, &layout, resolved).evaluate_with_products(&start)?;
-    let products = in_design_order(&layout, &products);
     let swept = sweep(products.as_ref());
     if !swept.aliased.is_empty() {
         let mut keep = vec![true; terms];
@@ -65,12 +79,33 @@ pub(crate) fn estimate(
         return Err(FitError::NotFinite { rows: at.not_finite });
     }
     match maximise(&mut Likelihood::new(table, &layout, resolved), start, at, watch) {
-        Ok(optimum) => Ok(Solution { layout, swept, optimum, products }),
+        Ok(optimum) => {
+            let (log_likelihood, method) = (optimum.at.value, Method::MaximumLikelihood);
+            Ok(Solution { layout, swept, optimum, products, log_likelihood, method })
+        }
         Err(stopped) => Err(explain(resolved, &layout, stopped)),
     }
 }
 
-fn explain(resolved: &Resolved, layout: &Layout, stopped: Stopped) -> FitError {
+/// Cross-products of all terms, up to a factor, in design order.
+pub(crate) fn products_at_start(table: &mut Table, resolved: &Resolved) -> Result<Mat<f64>, FitError> {
+    check_size(resolved)?;
+    let layout = Layout::new(&resolved.design, &resolved.scaling, &vec![true; resolved.design.terms().len()]);
+    let start = start_of(&resolved.category_weights, layout.order());
+    Ok(Likelihood::new(table, &layout, resolved).evaluate_with_products(&start)?.1)
+}
+
+fn check_size(resolved: &Resolved) -> Result<(), FitError> {
+    let terms = resolved.design.terms().len();
+    let compared = resolved.category_weights.len() - 1;
+    let (coefficients, most) = (terms * compared, MOST_COEFFICIENTS);
+    if coefficients > most {
+        return Err(FitError::TooLarge { coefficients, terms, compared, most });
+    }
+    Ok(())
+}
+
+pub(crate) fn explain(resolved: &Resolved, layout: &Layout, stopped: Stopped) -> FitError {
     match stopped {
         Stopped::Failed(error) => error,
         Stopped::Separated { direction, .. } => {
@@ -112,6 +147,21 @@ pub(crate) fn estimate_without(
     }
 }
 
+/// Fits a view of the rows, all terms of a layout.
+///
+/// `category_weights` are those of the view.
+pub(crate) fn estimate_view(
+    table: &mut Table,
+    layout: &Layout,
+    category_weights: &[f64],
+    view: &View,
+    start: Vec<f64>,
+) -> Result<Optimum, Stopped> {
+    let mut likelihood = Likelihood::of_view(table, layout, category_weights, view);
+    let at = likelihood.evaluate(&start, Order::Information)?;
+    maximise(&mut likelihood, start, at, &mut |_, _| {})
+}
+
 impl Solution {
     /// Where the optimum of a part of the terms lies if the log-likelihood is a parabola:
     /// `b_r - V_rf V_ff^-1 b_f`, with f the terms that are gone.
@@ -139,7 +189,7 @@ impl Solution {
 
 /// Coefficients of the model with intercepts only, category by category: `ln(n_j / n_0)`, then
 /// zeros. It is the optimum of that model.
-fn start_of(category_weights: &[f64], order: &[usize]) -> Vec<f64> {
+pub(crate) fn start_of(category_weights: &[f64], order: &[usize]) -> Vec<f64> {
     let intercept = |weight: &f64| (weight / category_weights[0]).ln();
     let block =
         |weight: &f64| order.iter().map(|&term| if term == 0 { intercept(weight) } else { 0.0 }).collect();
@@ -162,30 +212,49 @@ pub(crate) struct Likelihood<'s, 'a> {
     layout: &'s Layout,
     compared: usize,
     weight: f64,
+    /// What the rows are changed to before they are summed.
+    view: Option<&'s View<'s>>,
 }
+
+/// Makes other rows of a chunk: a part of them, or with other categories.
+pub(crate) type View<'v> = dyn Fn(&Chunk) -> Chunk + Sync + 'v;
 
 impl<'s, 'a> Likelihood<'s, 'a> {
     pub(crate) fn new(table: &'s mut Table<'a>, layout: &'s Layout, resolved: &Resolved) -> Self {
         let compared = resolved.category_weights.len() - 1;
-        Self { table, layout, compared, weight: resolved.category_weights.iter().sum() }
+        Self { table, layout, compared, weight: resolved.category_weights.iter().sum(), view: None }
+    }
+
+    /// The likelihood of a view of the rows.
+    pub(crate) fn of_view(
+        table: &'s mut Table<'a>,
+        layout: &'s Layout,
+        category_weights: &[f64],
+        view: &'s View<'s>,
+    ) -> Self {
+        let weight = category_weights.iter().sum();
+        Self { table, layout, compared: category_weights.len() - 1, weight, view: Some(view) }
     }
 
     fn sums(&mut self, point: &[f64], order: Order) -> Result<Sums, FitError> {
         let coefficients = Coefficients::from_vector(point, self.layout.terms(), self.compared);
-        let layout = self.layout;
+        let (layout, view) = (self.layout, self.view);
         let sums = self.table.reduce(|chunk| {
             let mut sums = Sums::new(layout, coefficients.compared, order);
-            add_chunk(&mut sums, &mut Workspace::default(), layout, &coefficients, chunk, order);
+            let seen = view.map_or(Cow::Borrowed(chunk), |view| Cow::Owned(view(chunk)));
+            add_chunk(&mut sums, &mut Workspace::default(), layout, &coefficients, &seen, order);
             sums
         })?;
         Ok(sums.unwrap_or_else(|| Sums::new(layout, self.compared, order)))
     }
 
     /// Evaluation with intercepts only: then the probabilities are the same in all rows, and the
-    /// sum over pairs of categories is proportional to the cross-products of the terms.
+    /// sum over pairs of categories is proportional to the cross-products of the terms, which are
+    /// returned in the order of the design.
     fn evaluate_with_products(&mut self, start: &[f64]) -> Result<(Evaluation, Mat<f64>), FitError> {
         let sums = self.sums(start, Order::Information)?;
-        Ok((evaluation(&sums, Order::Information), sums.all_pairs()))
+        let products = in_design_order(self.layout, &sums.all_pairs());
+        Ok((evaluation(&sums, Order::Information), products))
     }
 }
 
@@ -206,8 +275,11 @@ impl Objective for Likelihood<'_, '_> {
 
     fn separates(&mut self, direction: &[f64]) -> Result<bool, FitError> {
         let direction = Coefficients::from_vector(direction, self.layout.terms(), self.compared);
-        let layout = self.layout;
-        let margins = self.table.reduce(|chunk| Margins::of(layout, &direction, chunk))?;
+        let (layout, view) = (self.layout, self.view);
+        let margins = self.table.reduce(|chunk| {
+            let seen = view.map_or(Cow::Borrowed(chunk), |view| Cow::Owned(view(chunk)));
+            Margins::of(layout, &direction, &seen)
+        })?;
         Ok(margins.is_some_and(Margins::separate))
     }
 

@@ -9,6 +9,7 @@ use kilter_model::{
     COVARIANCE_ORDER, Covariance, FORMAT, FORMAT_VERSION, FitFigures, Lineage, ModelFile, RecordNames,
 };
 
+use crate::estimate::{Method, Solution};
 use crate::newton::Optimum;
 use crate::plan::Plan;
 use crate::raw::BackTransform;
@@ -29,10 +30,11 @@ pub(crate) struct Outcomes<'a> {
 }
 
 /// The model file: plain coefficients and their covariance, and the figures of the fit.
-pub(crate) fn model_file(outcomes: &Outcomes, back: &BackTransform, optimum: &Optimum) -> ModelFile {
+pub(crate) fn model_file(outcomes: &Outcomes, back: &BackTransform, solution: &Solution) -> ModelFile {
     let Outcomes { plan, resolved, .. } = outcomes;
     let others = resolved.category_names().into_iter().skip(1).map(String::from);
-    let coefficients: BTreeMap<String, Vec<f64>> = others.zip(back.coefficients(&optimum.point)).collect();
+    let coefficients: BTreeMap<String, Vec<f64>> =
+        others.zip(back.coefficients(&solution.optimum.point)).collect();
     let names = RecordNames::default();
     ModelFile {
         format: FORMAT.into(),
@@ -50,7 +52,7 @@ pub(crate) fn model_file(outcomes: &Outcomes, back: &BackTransform, optimum: &Op
         terms: resolved.design.term_names(),
         coefficients,
         covariance: Some(lower_triangle(&back.covariance(outcomes.covariance.matrix.as_ref()))),
-        fit: Some(figures(outcomes, optimum)),
+        fit: Some(figures(outcomes, solution)),
         holdout: None,
         baseline: None,
         monitor: plan.monitor.clone(),
@@ -66,12 +68,17 @@ fn lower_triangle(covariance: &Mat<f64>) -> Covariance {
     Covariance { order: COVARIANCE_ORDER.into(), lower: lower.collect() }
 }
 
-fn figures(outcomes: &Outcomes, optimum: &Optimum) -> FitFigures {
+fn figures(outcomes: &Outcomes, solution: &Solution) -> FitFigures {
+    let optimum = &solution.optimum;
+    let (ridge, effective) = match &solution.method {
+        Method::MaximumLikelihood => (0.0, None),
+        Method::Ridge { rho, effective, .. } => (*rho, Some(effective.iter().sum::<f64>())),
+    };
     let Outcomes { plan, resolved, statistics, total, .. } = outcomes;
     let weight = total.count.value();
-    let log_likelihood = optimum.at.value;
+    let log_likelihood = solution.log_likelihood;
     let log_likelihood_null = log_likelihood_of_mix(&resolved.category_weights);
-    let parameters = optimum.point.len() as f64;
+    let parameters = effective.unwrap_or(optimum.point.len() as f64);
     FitFigures {
         rows: total.rows,
         weight,
@@ -84,7 +91,7 @@ fn figures(outcomes: &Outcomes, optimum: &Optimum) -> FitFigures {
         iterations: optimum.steps,
         certificate: certificate(optimum, resolved.category_weights.len() - 1),
         standard_errors: plan.fit.standard_errors,
-        ridge: 0.0,
+        ridge,
         aic: -2.0 * log_likelihood + 2.0 * parameters,
         bic: -2.0 * log_likelihood + parameters * weight.ln(),
         mcfadden_r2: 1.0 - log_likelihood / log_likelihood_null,
@@ -92,7 +99,7 @@ fn figures(outcomes: &Outcomes, optimum: &Optimum) -> FitFigures {
         aliased: outcomes.aliased.to_vec(),
         warnings: outcomes.warnings.to_vec(),
         clusters: outcomes.covariance.clusters,
-        effective_parameters: None,
+        effective_parameters: effective,
         data_fingerprint: None,
         period: statistics.period.map(|period| period.map(format_time)),
         program: concat!("kilter ", env!("CARGO_PKG_VERSION")).into(),

@@ -14,6 +14,8 @@ use crate::linear::{Factor, dot};
 /// Stop when the decrement is below this, and take the last step all the same: its error is of the
 /// order of the decrement squared.
 const CLOSE: f64 = 1e-6;
+/// The same where a few digits are enough.
+const NEAR: f64 = 1e-4;
 /// Largest number of steps.
 const MOST_STEPS: u64 = 50;
 /// Share of the gain expected from a step that it must reach (Armijo).
@@ -114,16 +116,44 @@ impl Step {
 /// Maximises a concave function from a point at which it has been evaluated.
 pub(crate) fn maximise(
     objective: &mut dyn Objective,
-    mut point: Vec<f64>,
-    mut at: Evaluation,
+    point: Vec<f64>,
+    at: Evaluation,
     watch: &mut dyn FnMut(u64, Iterate),
 ) -> Result<Optimum, Stopped> {
+    let near = climb(objective, point, at, CLOSE, watch)?;
+    finish(objective, near, watch)
+}
+
+/// The maximum to about the square of [`NEAR`], without derivatives there.
+pub(crate) fn approach(
+    objective: &mut dyn Objective,
+    point: Vec<f64>,
+    at: Evaluation,
+) -> Result<Vec<f64>, Stopped> {
+    let near = climb(objective, point, at, NEAR, &mut |_, _| {})?;
+    Ok(moved(&near.point, &near.step.direction, 1.0))
+}
+
+/// A point so near the maximum that the next step may be taken without looking.
+struct Near {
+    point: Vec<f64>,
+    step: Step,
+    steps: u64,
+}
+
+fn climb(
+    objective: &mut dyn Objective,
+    mut point: Vec<f64>,
+    mut at: Evaluation,
+    close: f64,
+    watch: &mut dyn FnMut(u64, Iterate),
+) -> Result<Near, Stopped> {
     let mut before = f64::INFINITY;
     for steps in 0..=MOST_STEPS {
         let step = Step::at(&at, steps)?;
         watch(steps, Iterate { value: at.value, decrement: step.decrement });
-        if step.decrement <= CLOSE {
-            return finish(objective, point, step, steps, watch);
+        if step.decrement <= close {
+            return Ok(Near { point, step, steps });
         }
         let ratio = (step.decrement / before).powi(2);
         let suspicious = steps >= 5 && step.decrement < 1.0 && (0.25..0.75).contains(&ratio);
@@ -140,11 +170,10 @@ pub(crate) fn maximise(
 /// The last steps, taken without looking at the value, until the gradient is flat.
 fn finish(
     objective: &mut dyn Objective,
-    mut point: Vec<f64>,
-    mut step: Step,
-    mut steps: u64,
+    near: Near,
     watch: &mut dyn FnMut(u64, Iterate),
 ) -> Result<Optimum, Stopped> {
+    let Near { mut point, mut step, mut steps } = near;
     let flat = FLAT * objective.weight();
     for _ in 0..LAST_STEPS {
         point = moved(&point, &step.direction, 1.0);

@@ -66,6 +66,8 @@ pub(crate) struct Resolved {
     pub(crate) relabel: Relabel,
     /// Weight of each category, the reference first; they add up to the number of cases.
     pub(crate) category_weights: Vec<f64>,
+    /// Cases of each category, the reference first.
+    pub(crate) category_cases: Vec<f64>,
     /// Cases by field, level (or false and true) and category, the reference category first;
     /// empty for numbers.
     pub(crate) level_cases: Vec<Vec<Vec<f64>>>,
@@ -121,6 +123,7 @@ pub(crate) fn resolve(
         outcome: categories.outcome.clone(),
         relabel: Relabel { categories: categories.relabel(), levels, weight_factor },
         category_weights: category_weights.iter().map(|weight| weight * weight_factor).collect(),
+        category_cases,
         fields,
         design,
         scaling,

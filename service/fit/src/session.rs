@@ -5,15 +5,17 @@ use kilter_model::StandardErrors;
 use crate::analysis::Analysis;
 use crate::chunk::Chunk;
 use crate::covariance::{LEAST_CLUSTERS, clustered, robust};
+use crate::cross_validation::{CrossValidation, cross_validate, drawn_fold, grid, number_of_folds};
 use crate::error::FitError;
-use crate::estimate::{Solution, estimate};
-use crate::fitted::Fitted;
+use crate::estimate::{Method, Solution, estimate};
+use crate::fitted::{Fitted, RidgeFigures};
 use crate::model::{Outcomes, model_file};
 use crate::newton::Iterate;
 use crate::plan::{HoldoutPlan, Plan, RidgePlan};
 use crate::raw::{BackTransform, describe};
 use crate::reader::{ReadStatistics, Reader};
 use crate::resolve::{Resolved, resolve};
+use crate::ridge::estimate_ridge;
 use crate::source::RowSource;
 use crate::split::Split;
 use crate::survey::{Survey, Surveyor};
@@ -93,7 +95,6 @@ impl<'a> Session<'a> {
         settings: FitSettings,
         progress: &mut dyn FnMut(Progress),
     ) -> Result<Self, FitError> {
-        supported(plan)?;
         let rows: &mut dyn Rows = rows;
         let split = split_of(plan, rows)?;
         let mut reader = Reader::new(plan, split);
@@ -126,19 +127,32 @@ impl<'a> Session<'a> {
         Ok(Self { plan: plan.clone(), split, table, survey, resolved, statistics, clusters })
     }
 
-    /// Fits by maximum likelihood.
+    /// Fits as the plan says: by maximum likelihood, or with a ridge penalty.
     ///
     /// # Errors
     /// As [`fit`].
     pub fn fit(mut self, progress: &mut dyn FnMut(Progress)) -> Result<Analysis<'a>, FitError> {
         let mut trace = Vec::new();
-        let solution = estimate(&mut self.table, &self.resolved, &mut |number, iterate| {
+        let mut watch = |number, iterate| {
             let Iterate { value: log_likelihood, decrement } = iterate;
             trace.push([log_likelihood, decrement]);
             progress(Progress::Step { number, log_likelihood, decrement });
-        })?;
+        };
+        let (table, resolved) = (&mut self.table, &self.resolved);
+        let mut validation = None;
+        let solution = match self.plan.fit.ridge {
+            RidgePlan::Penalty(0.0) => estimate(table, resolved, &mut watch)?,
+            RidgePlan::Penalty(rho) => estimate_ridge(table, resolved, rho, &mut watch)?,
+            RidgePlan::CrossValidate => {
+                let folds = number_of_folds(resolved);
+                let found = cross_validate(table, resolved, &grid(), folds, &drawn_fold(folds))?;
+                let rho = found.chosen;
+                validation = Some(found);
+                estimate_ridge(table, resolved, rho, &mut watch)?
+            }
+        };
         let covariance = self.covariance(&solution)?;
-        let fitted = self.fitted(&solution, &covariance, trace);
+        let fitted = self.fitted(&solution, &covariance, trace, validation);
         let Self { plan, table, resolved, .. } = self;
         Ok(Analysis { fitted, plan, table, resolved, solution, covariance })
     }
@@ -166,10 +180,16 @@ impl<'a> Session<'a> {
         Ok(ErrorKind { matrix, clusters })
     }
 
-    fn fitted(&self, solution: &Solution, covariance: &ErrorKind, trace: Vec<[f64; 2]>) -> Fitted {
+    fn fitted(
+        &self,
+        solution: &Solution,
+        covariance: &ErrorKind,
+        trace: Vec<[f64; 2]>,
+        validation: Option<CrossValidation>,
+    ) -> Fitted {
         let resolved = &self.resolved;
         let names = resolved.design.term_names();
-        let Solution { layout, swept, optimum, .. } = solution;
+        let Solution { layout, swept, .. } = solution;
         let (back, left_out) =
             BackTransform::new(&resolved.design, &resolved.scaling, layout.order(), &swept.aliased);
         let aliased: Vec<String> = left_out
@@ -183,6 +203,11 @@ impl<'a> Session<'a> {
                 names[term]
             )
         }));
+        if validation.as_ref().is_some_and(|validation| validation.at_end) {
+            warnings.push(
+                "the smallest loss of the cross-validation lies at an end of the penalties tried".to_owned(),
+            );
+        }
         let outcomes = Outcomes {
             plan: &self.plan,
             resolved,
@@ -194,17 +219,59 @@ impl<'a> Session<'a> {
         };
         let total = &self.survey.total;
         Fitted {
-            model: model_file(&outcomes, &back, optimum),
+            model: model_file(&outcomes, &back, solution),
             split: self.split,
             rows_read: self.statistics.rows_read,
             held_out_rows: self.statistics.held_out_rows,
             refused_rows: self.statistics.refused_rows,
             refused: self.statistics.refused.clone(),
             effective_cases: total.weight.value().powi(2) / total.squares.value(),
+            ridge: self.ridge_figures(solution, &back, validation),
             warnings,
             aliased,
             trace,
         }
+    }
+
+    fn ridge_figures(
+        &self,
+        solution: &Solution,
+        back: &BackTransform,
+        cross_validation: Option<CrossValidation>,
+    ) -> Option<RidgeFigures> {
+        let Method::Ridge { rho, effective, sampling } = &solution.method else { return None };
+        let order = solution.layout.order();
+        let mut by_field = vec![0.0; 1 + self.resolved.fields.len()];
+        for (index, effective) in effective.iter().enumerate() {
+            let fields = &self.resolved.design.terms()[order[index % order.len()]].fields;
+            for field in fields {
+                by_field[1 + field] += effective / fields.len() as f64;
+            }
+            if fields.is_empty() {
+                by_field[0] += effective;
+            }
+        }
+        let sampling = back.covariance(sampling.as_ref());
+        let terms = self.resolved.design.terms().len();
+        let errors = |block: usize| {
+            (0..terms)
+                .map(|term| {
+                    let place = block * terms + term;
+                    sampling[(place, place)].max(0.0).sqrt()
+                })
+                .collect()
+        };
+        let categories = self.resolved.category_names();
+        Some(RidgeFigures {
+            ridge: *rho,
+            effective_parameters: by_field,
+            sampling_errors: categories[1..]
+                .iter()
+                .enumerate()
+                .map(|(block, name)| ((*name).to_owned(), errors(block)))
+                .collect(),
+            cross_validation,
+        })
     }
 }
 
@@ -214,13 +281,6 @@ pub(crate) struct ErrorKind {
     pub(crate) matrix: faer::Mat<f64>,
     /// Number of clusters, where it is robust to them.
     pub(crate) clusters: Option<u64>,
-}
-
-fn supported(plan: &Plan) -> Result<(), FitError> {
-    if plan.fit.ridge != RidgePlan::Penalty(0.0) {
-        return Err(FitError::Unsupported { key: "fit.ridge" });
-    }
-    Ok(())
 }
 
 fn split_of(plan: &Plan, rows: &mut dyn Rows) -> Result<Split, FitError> {
@@ -258,4 +318,10 @@ impl Keeper {
             chunks.push(chunk);
         }
     }
+}
+
+/// The rows of a session and what was decided about them.
+#[cfg(test)]
+pub(crate) fn opened(session: Session) -> (Table, Resolved) {
+    (session.table, session.resolved)
 }

@@ -25,7 +25,7 @@ pub(crate) fn model_page(model: &ModelFile, drift: &DriftReport) -> Markup {
         h2 id="findings" { "What the figures say" }
         ul class="findings" {
             @for finding in &report.findings {
-                li class=(severity(finding.severity)) { strong { (severity(finding.severity)) } " " (finding.sentence) }
+                li class=(severity(finding.severity)) { strong { (severity(finding.severity)) } " " (with_code(&finding.sentence)) }
             }
         }
         (mix(report))
@@ -38,6 +38,15 @@ pub(crate) fn model_page(model: &ModelFile, drift: &DriftReport) -> Markup {
         }
     };
     page(&model.name, &body)
+}
+
+/// A sentence whose names in backticks are set apart.
+fn with_code(sentence: &str) -> Markup {
+    html! {
+        @for (place, part) in sentence.split('`').enumerate() {
+            @if place % 2 == 1 { code { (part) } } @else { (part) }
+        }
+    }
 }
 
 fn mix(report: &Report) -> Markup {

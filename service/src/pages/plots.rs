@@ -125,6 +125,7 @@ fn draw_calibration(area: &Area, category: &str, points: &[CurvePoint]) -> Drawn
     let mut chart = ChartBuilder::on(area)
         .caption(category, text_style(14))
         .margin(8)
+        .margin_right(24)
         .x_label_area_size(28)
         .y_label_area_size(44)
         .build_cartesian_2d(0.0..1.0, 0.0..1.0)?;

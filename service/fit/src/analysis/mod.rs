@@ -1,11 +1,15 @@
 //! What a fit tells beside its coefficients.
 
+mod alternatives;
 mod effects;
 mod field_tests;
+mod goodness;
 mod statistics;
 
+pub use alternatives::{Hausman, IndependenceTest, SeparateFit, SeparateTerm, SmallHsiao};
 pub use effects::{Change, Effect};
 pub use field_tests::{Distribution, FieldTest, TestResult, Tested};
+pub use goodness::{GoodnessOfFit, GroupedFit, ObservedExpected};
 pub use statistics::{FitStatistics, fit_statistics};
 
 use crate::estimate::Solution;

@@ -333,19 +333,6 @@ fn interactions(document: &PlanDocument) -> Checked<'_, Vec<[String; 2]>> {
 fn fit<'a>(document: &FitDocument, data: &DataPlan) -> Checked<'a, FitPlan> {
     let at = |key| [Step::Key("fit"), Step::Key(key)];
     let weighted = data.weight.is_some();
-    let standard_errors = match document.standard_errors {
-        None if weighted => StandardErrors::Robust,
-        None => StandardErrors::Model,
-        Some(StandardErrors::Model) if weighted => {
-            let reason = "`model` does not hold with sampling weights: use `robust` or `cluster`";
-            return Err(Objection::new(at("standard_errors"), reason));
-        }
-        Some(StandardErrors::Cluster) if data.cluster.is_none() => {
-            let reason = "`cluster` needs the column of the clusters: add `data.cluster`";
-            return Err(Objection::new(at("standard_errors"), reason));
-        }
-        Some(kind) => kind,
-    };
     let ridge = match document.ridge {
         None => RidgePlan::Penalty(0.0),
         Some(RidgeDocument::CrossValidate) => RidgePlan::CrossValidate,
@@ -359,10 +346,24 @@ fn fit<'a>(document: &FitDocument, data: &DataPlan) -> Checked<'a, FitPlan> {
             ));
         }
     };
-    if ridge != RidgePlan::Penalty(0.0) && standard_errors != StandardErrors::Model && !weighted {
-        let reason = "a penalised fit has standard errors of kind `model` only";
-        return Err(Objection::new(at("standard_errors"), reason));
-    }
+    let penalised = ridge != RidgePlan::Penalty(0.0);
+    let standard_errors = match document.standard_errors {
+        Some(StandardErrors::Robust | StandardErrors::Cluster) if penalised => {
+            let reason = "a penalised fit has standard errors of kind `model` only";
+            return Err(Objection::new(at("standard_errors"), reason));
+        }
+        None if weighted && !penalised => StandardErrors::Robust,
+        None => StandardErrors::Model,
+        Some(StandardErrors::Model) if weighted && !penalised => {
+            let reason = "`model` does not hold with sampling weights: use `robust` or `cluster`";
+            return Err(Objection::new(at("standard_errors"), reason));
+        }
+        Some(StandardErrors::Cluster) if data.cluster.is_none() => {
+            let reason = "`cluster` needs the column of the clusters: add `data.cluster`";
+            return Err(Objection::new(at("standard_errors"), reason));
+        }
+        Some(kind) => kind,
+    };
     Ok(FitPlan { ridge, standard_errors })
 }
 

@@ -1,10 +1,10 @@
 //! Fits of open data sets against values that several independent programs agree on. Each data set
 //! has its source, licence and the origin of the values beside it.
 
-use crate::support::{Table, assert_close, fitted, json, plan};
+use crate::support::{Table, analysed, assert_close, fitted, json, plan};
+use kilter_fit::Fitted;
 use kilter_fit::analysis::{Change, Effect, FieldTest, TestResult, Tested, fit_statistics};
 use kilter_fit::inference::{Estimate, ProbabilityIntervals, coefficients, contrast};
-use kilter_fit::{FitSettings, Fitted, Session};
 use kilter_model::{INTERCEPT, Scorer, check};
 use serde_json::Value;
 
@@ -263,12 +263,12 @@ fn check_fit(folder: &str, data: &str, name: &str) {
     let table = Table::read(&format!("{folder}/{data}"));
     let toml = toml_of(&expected);
     let plan = plan(&toml);
-    let mut rows = table.batches(&plan, 1000);
-    let session = Session::open(&plan, &mut rows, FitSettings::default(), &mut |_| {}).unwrap();
-    let mut analysis = session.fit(&mut |_| {}).unwrap();
-    let tests = analysis.field_tests().unwrap();
-    let effects = analysis.effects().unwrap();
-    let fitted = analysis.fitted;
+    let (fitted, tests, effects, grouped) = analysed(&plan, &table, |mut analysis| {
+        let tests = analysis.field_tests().unwrap();
+        let effects = analysis.effects().unwrap();
+        let grouped = analysis.grouped_fit().unwrap();
+        (analysis.fitted, tests, effects, grouped)
+    });
     let model = &fitted.model;
     let expected = &expected["expected"];
     assert_eq!(check(model), [], "{name}");
@@ -288,6 +288,14 @@ fn check_fit(folder: &str, data: &str, name: &str) {
     check_robust(name, &toml, &table, &expected["robust_HC0"]);
     check_field_tests(name, &tests, &expected["terms"]);
     check_statistics(name, &fitted, expected);
+    if let (Some(found), Some(expected)) = (grouped, expected.get("grouped_fit")) {
+        assert_eq!(found.patterns, expected["patterns"].as_u64().unwrap(), "{name}");
+        let figures = [(found.deviance, "G2", "deviance_G2"), (found.pearson, "X2", "pearson_X2")];
+        for (test, kind, key) in figures {
+            assert_close(name, test.statistic, number(&expected[key]), 0.0, STATISTIC);
+            assert_close(name, test.p, number(&expected[format!("p_{kind}")]), 0.0, P_VALUE);
+        }
+    }
     if let Some(expected) = expected.get("average_marginal_effects") {
         check_effects(name, &effects, expected);
     }

@@ -2,7 +2,7 @@
 
 use std::path::PathBuf;
 
-use kilter_fit::{Batches, FitError, FitSettings, Fitted, Plan, fit};
+use kilter_fit::{Analysis, Batches, FitError, FitSettings, Fitted, Plan, Session, fit};
 use kilter_model::cells::{parse_flag, parse_number, parse_time};
 use kilter_model::{
     Batch, CellKind, Column, ColumnSpec, MISSING_CODE, MISSING_FLAG, MISSING_TIME, ModelFile, TextColumn,
@@ -103,6 +103,14 @@ pub(crate) fn try_fit(plan: &Plan, table: &Table) -> Result<Fitted, FitError> {
 
 pub(crate) fn fitted(plan: &Plan, table: &Table) -> Fitted {
     try_fit(plan, table).unwrap_or_else(|error| panic!("{error}"))
+}
+
+/// Fits and hands the fit with its rows on.
+pub(crate) fn analysed<T>(plan: &Plan, table: &Table, analyse: impl FnOnce(Analysis) -> T) -> T {
+    let mut rows = table.batches(plan, 1000);
+    let session = Session::open(plan, &mut rows, FitSettings::default(), &mut |_| {});
+    let session = session.unwrap_or_else(|error| panic!("{error}"));
+    analyse(session.fit(&mut |_| {}).unwrap_or_else(|error| panic!("{error}")))
 }
 
 /// A plan for the worked example: `fields` and `data` are further lines of TOML.

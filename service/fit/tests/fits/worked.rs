@@ -1,13 +1,13 @@
 //! The worked example: every figure beside an independent computation.
 
-use kilter_fit::analysis::{Analysis, Change, Distribution, Tested, fit_statistics};
+use kilter_fit::analysis::{Change, Distribution, Effect, FieldTest, Tested, fit_statistics};
 use kilter_fit::inference::{ProbabilityInterval, ProbabilityIntervals, coefficients as estimates, contrast};
-use kilter_fit::{FitError, FitSettings, Fitted, Plan, Session};
+use kilter_fit::{Fitted, Plan};
 use kilter_model::{ModelFile, Scorer};
 use serde_json::Value;
 
 use crate::support::{
-    G, Table, X1, X2, assert_all_close, assert_close, coefficients, fitted, json, numbers, plan,
+    G, Table, X1, X2, analysed, assert_all_close, assert_close, coefficients, fitted, json, numbers, plan,
     standard_errors, worked_plan,
 };
 
@@ -266,19 +266,18 @@ fn four_clusters_are_too_few() {
     assert!(error.to_string().starts_with("`cl` has 4 clusters"), "{error}");
 }
 
-/// Opens and fits the worked example for analyses.
-#[track_caller]
-fn analysed<T>(plan: &Plan, table: &Table, analyse: impl FnOnce(&mut Analysis) -> Result<T, FitError>) -> T {
-    let mut rows = table.batches(plan, 1000);
-    let session = Session::open(plan, &mut rows, FitSettings::default(), &mut |_| {}).unwrap();
-    analyse(&mut session.fit(&mut |_| {}).unwrap()).unwrap()
+fn field_tests(plan: &Plan, table: &Table) -> Vec<FieldTest> {
+    analysed(plan, table, |mut analysis| analysis.field_tests().unwrap())
+}
+
+fn effects(plan: &Plan, table: &Table) -> Vec<Effect> {
+    analysed(plan, table, |mut analysis| analysis.effects().unwrap())
 }
 
 #[test]
 fn tests_of_fields() {
     let expected = expected();
-    let tests =
-        analysed(&worked_plan("", &format!("{X1}{X2}{G}")), &tiny(), |analysis| analysis.field_tests());
+    let tests = field_tests(&worked_plan("", &format!("{X1}{X2}{G}")), &tiny());
     let names = ["x1", "x2", "g"].map(|name| Tested::Field(name.into()));
     for (test, (name, key)) in tests.iter().zip(
         names.iter().zip(["x1", "x2", "g"].map(|f| format!("field {f} df,Wald,p,LR,p,robustWald,score"))),
@@ -310,8 +309,7 @@ fn tests_count_the_coefficients_that_are_lost() {
         row.push(copy.into());
     }
     let copy = "[[field]]\nname = \"copy\"\nkind = \"levels\"\nreference = \"no\"\n";
-    let tests =
-        analysed(&worked_plan("", &format!("{X1}{G}{copy}")), &table, |analysis| analysis.field_tests());
+    let tests = field_tests(&worked_plan("", &format!("{X1}{G}{copy}")), &table);
     let freedom: Vec<_> = tests.iter().map(|test| (&test.tested, test.degrees_of_freedom)).collect();
     let field = |name: &str| Tested::Field(name.into());
     assert_eq!(freedom, [(&field("x1"), 2), (&field("g"), 2), (&Tested::Everything, 6)]);
@@ -320,7 +318,7 @@ fn tests_count_the_coefficients_that_are_lost() {
 #[test]
 fn with_few_clusters_fields_are_tested_by_f() {
     let plan = worked_plan("cluster = \"cl\"", &format!("{X1}{X2}{G}[fit]\nstandard_errors = \"cluster\""));
-    let tests = analysed(&plan, &tiny(), |analysis| analysis.field_tests());
+    let tests = field_tests(&plan, &tiny());
     let test = &tests[0];
     let wald = test.wald.unwrap();
     assert_eq!(wald.distribution, Distribution::F { numerator: 2.0, denominator: 13.0 });
@@ -337,7 +335,7 @@ fn with_few_clusters_fields_are_tested_by_f() {
 #[test]
 fn average_marginal_effects() {
     let expected = expected();
-    let effects = analysed(&worked_plan("", &format!("{X1}{X2}{G}")), &tiny(), |analysis| analysis.effects());
+    let effects = effects(&worked_plan("", &format!("{X1}{X2}{G}")), &tiny());
     let rows = |key: &str| expected[key].as_array().unwrap().iter().flat_map(numbers).collect::<Vec<_>>();
     let found: Vec<f64> = effects.iter().map(|effect| effect.effect).collect();
     assert_all_close("effects", &found, &rows("AME x1,x2,l,m x (a,b,c)"), 0.0, DIGITS);
@@ -367,6 +365,65 @@ fn measures_of_fit() {
     let found =
         [found.aic, found.bic, found.mcfadden, found.mcfadden_adjusted, found.cox_snell, found.nagelkerke];
     assert_all_close("measures", &found, &numbers(&expected()["AIC,BIC,McF,McFadj,CS,Nag"]), 0.0, DIGITS);
+}
+
+#[test]
+fn goodness_of_fit_in_groups() {
+    let expected = json("worked/fitting.json")["firth_ridge_gof_iia_terms"].clone();
+    let plan = worked_plan("", &format!("{X1}{X2}{G}"));
+    let (six, ten, chosen) = analysed(&plan, &tiny(), |mut analysis| {
+        let mut of = |groups| analysis.goodness_of_fit_in(groups).unwrap().unwrap();
+        (of(6), of(10), analysis.goodness_of_fit().unwrap())
+    });
+    for (found, key) in [(&six, "FHB G=6 stat,df,p"), (&ten, "FHB G=10 stat,df,p")] {
+        let [statistic, freedom, p] = numbers(&expected[key])[..] else { panic!("three") };
+        assert_eq!(found.test.distribution, Distribution::ChiSquared { freedom });
+        assert_all_close(key, &[found.test.statistic, found.test.p], &[statistic, p], 0.0, DIGITS);
+        assert!(!found.valid, "60 cases are too few for {key}");
+    }
+    let (first, last) = (&six.groups[0], &six.groups[5]);
+    assert_eq!((&first.observed, &last.observed), (&vec![5.0, 4.0, 1.0], &vec![1.0, 0.0, 9.0]));
+    assert_all_close(
+        "first",
+        &first.expected,
+        &[4.573_058_447_1, 4.356_856_426, 1.070_085_126_9],
+        0.0,
+        DIGITS,
+    );
+    assert_all_close(
+        "last",
+        &last.expected,
+        &[1.193_330_782_1, 0.556_530_417_3, 8.250_138_800_6],
+        0.0,
+        DIGITS,
+    );
+    assert!(chosen.is_none_or(|found| found.groups.len() == 5));
+}
+
+/// A flag and levels: six distinct rows.
+#[test]
+fn goodness_of_fit_of_a_table() {
+    let expected = json("worked/fitting.json")["firth_ridge_gof_iia_terms"].clone();
+    let mut table = tiny();
+    let x1 = table.column("x1");
+    table.header.push("h".into());
+    for row in &mut table.rows {
+        let high = row[x1].parse::<f64>().unwrap() > 2.4;
+        row.push(high.to_string());
+    }
+    let plan = worked_plan("", &format!("[[field]]\nname = \"h\"\nkind = \"flag\"\n{G}"));
+    let (beta, found) = analysed(&plan, &table, |mut analysis| {
+        (coefficients(&analysis.fitted.model), analysis.grouped_fit().unwrap().unwrap())
+    });
+    assert_all_close("beta", &beta, &numbers(&expected["grouped beta"]), 0.0, DIGITS);
+    let [_, deviance, pearson, freedom, p_deviance, p_pearson] = numbers(&expected["ll,dev,X2,df,pD,pX"])[..]
+    else {
+        panic!("six")
+    };
+    assert_eq!(found.patterns, 6);
+    assert_eq!(found.deviance.distribution, Distribution::ChiSquared { freedom });
+    let figures = [found.deviance.statistic, found.pearson.statistic, found.deviance.p, found.pearson.p];
+    assert_all_close("table", &figures, &[deviance, pearson, p_deviance, p_pearson], 0.0, DIGITS);
 }
 
 /// Spline columns, products and missing flags.
