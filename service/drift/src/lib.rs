@@ -2,7 +2,7 @@
 //!
 //! A [`Frame`] says what the summaries of a model version are measured in. A [`Summary`] takes in
 //! scored records and, later, their outcomes; summaries add and subtract. The statistics are
-//! computed from summaries, so their cost does not depend on the number of records. [`report`]
+//! computed from summaries, so their cost does not depend on the number of records. [`report()`]
 //! puts all of them together, with findings in plain sentences.
 //!
 //! This crate is pure computation: it knows no storage, no clock and no network.

@@ -1,7 +1,7 @@
 //! CSV into batches. Every cell is read as text and converted by the one converter that posted
 //! records use too, so the same text gives the same bits wherever it comes in.
 
-use std::io::{BufRead, BufReader, Read};
+use std::io::{self, BufRead, BufReader, Read};
 use std::path::{Path, PathBuf};
 
 use csv::{ByteRecord, StringRecord};
@@ -25,6 +25,9 @@ pub(crate) struct CsvSource {
     options: ReadOptions,
     /// Bytes before the first that the CSV reader saw.
     skipped: u64,
+    /// Where lines end in a carriage return and a line feed, the CSV reader sees the line feed as
+    /// the beginning of the next record, and its line numbers are one behind.
+    lines_behind: u64,
 }
 
 impl CsvSource {
@@ -34,19 +37,28 @@ impl CsvSource {
         options: ReadOptions,
     ) -> Result<Self, TableError> {
         let mut stream = BufReader::with_capacity(1 << 18, stream);
-        let start = stream.fill_buf().map_err(|error| TableError::read(path, error))?;
+        let start = stream.fill_buf().map_err(|error| unreadable(path, &error))?;
         if start.is_empty() {
             return Err(TableError::Empty { path: path.to_owned() });
         }
         let skipped = if start.starts_with(BYTE_ORDER_MARK) { BYTE_ORDER_MARK.len() } else { 0 };
         let separator = options.separator.unwrap_or_else(|| separator_of(&start[skipped..]));
+        let lines_behind = u64::from(ends_with_return(&start[skipped..]));
         stream.consume(skipped);
         let mut reader = csv::ReaderBuilder::new().delimiter(separator).flexible(true).from_reader(stream);
         let head = reader.byte_headers().map_err(|error| csv_error(path, &error))?.clone();
         let names: Vec<String> =
             text_of(path, head, skipped as u64)?.iter().map(|name| name.trim().to_owned()).collect();
         let places = places(path, &options.columns, &names)?;
-        Ok(Self { path: path.to_owned(), reader, names, places, options, skipped: skipped as u64 })
+        Ok(Self {
+            path: path.to_owned(),
+            reader,
+            names,
+            places,
+            options,
+            skipped: skipped as u64,
+            lines_behind,
+        })
     }
 
     /// Reads one batch; `None` at the end.
@@ -58,7 +70,7 @@ impl CsvSource {
             if !self.reader.read_byte_record(&mut bytes).map_err(|error| csv_error(&self.path, &error))? {
                 break;
             }
-            lines.push(bytes.position().map_or(0, csv::Position::line));
+            lines.push(bytes.position().map_or(0, csv::Position::line) + self.lines_behind);
             let record = text_of(&self.path, bytes, self.skipped)?;
             if record.len() == self.names.len() {
                 cells.push_row(|place| self.places[place].and_then(|place| record.get(place)));
@@ -122,9 +134,22 @@ fn text_of(path: &Path, record: ByteRecord, skipped: u64) -> Result<StringRecord
 
 fn csv_error(path: &Path, error: &csv::Error) -> TableError {
     match error.kind() {
-        csv::ErrorKind::Io(cause) => {
-            TableError::malformed(path, "CSV", format!("{cause}; it may be cut short"))
-        }
+        csv::ErrorKind::Io(cause) => unreadable(path, cause),
         _ => TableError::malformed(path, "CSV", error),
     }
+}
+
+/// A failure to read: of the disk, or of a compressed file that is spoilt or cut short.
+fn unreadable(path: &Path, cause: &io::Error) -> TableError {
+    match cause.kind() {
+        io::ErrorKind::InvalidData | io::ErrorKind::InvalidInput | io::ErrorKind::UnexpectedEof => {
+            TableError::malformed(path, "CSV", format!("{cause}; it may be spoilt or cut short"))
+        }
+        kind => TableError::read(path, kind.into()),
+    }
+}
+
+/// Whether the first line ends in a carriage return and a line feed.
+fn ends_with_return(start: &[u8]) -> bool {
+    start.split_inclusive(|byte| *byte == b'\n').next().is_some_and(|line| line.ends_with(b"\r\n"))
 }

@@ -14,6 +14,8 @@ mod format;
 mod ndjson;
 mod reader;
 mod rows;
+#[cfg(test)]
+mod tests;
 mod writer;
 
 pub use error::TableError;
