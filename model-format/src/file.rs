@@ -427,7 +427,7 @@ impl ModelFile {
     /// Index of the reference category.
     ///
     /// Returns 0 for a file that names a reference category which is no category; such a file
-    /// does not pass [`crate::check`].
+    /// does not pass [`crate::check()`].
     pub fn reference_index(&self) -> usize {
         self.outcome.categories.iter().position(|c| *c == self.outcome.reference).unwrap_or(0)
     }

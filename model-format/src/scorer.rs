@@ -77,7 +77,7 @@ impl Scorer {
     ///
     /// # Errors
     /// [`DesignError`] where fields and interactions make no design. The numbers of terms and
-    /// coefficients are the business of [`crate::check`]; a file that passes it can be scored.
+    /// coefficients are the business of [`crate::check()`]; a file that passes it can be scored.
     pub fn new(model: &ModelFile) -> Result<Self, DesignError> {
         let design = Design::of_model(model)?;
         let rows: Vec<&[f64]> = model

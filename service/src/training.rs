@@ -135,6 +135,9 @@ struct Evaluation<'a> {
     samples: Vec<Vec<f64>>,
     /// A sample of one minus the probability of the reference category.
     unlike_reference: Vec<f64>,
+    /// What a weight of one counts for: sampling weights only matter in proportion, and all of
+    /// them together count for as many cases as the fit was worth.
+    cases_per_weight: f64,
 }
 
 /// A row of the fit, scored.
@@ -171,6 +174,7 @@ impl<'a> Evaluation<'a> {
             places: plan.column_places(),
             samples: vec![Vec::new(); fitted.model.fields.len()],
             unlike_reference: Vec::new(),
+            cases_per_weight: 1.0,
         })
     }
 
@@ -179,7 +183,7 @@ impl<'a> Evaluation<'a> {
         let every = (self.fitted.rows_read as usize).div_ceil(MOST_SAMPLED).max(1);
         let (mut samples, mut unlike) = (std::mem::take(&mut self.samples), Vec::new());
         let reference = self.scorer.reference();
-        let mut number = 0;
+        let (mut number, mut weight) = (0, 0.0);
         self.visit(rows, |row, probabilities| {
             if row.held_out {
                 return Ok(());
@@ -193,8 +197,12 @@ impl<'a> Evaluation<'a> {
                 );
             }
             number += 1;
+            weight += row.cases;
             Ok(())
         })?;
+        if self.places.weight.is_some() {
+            self.cases_per_weight = self.fitted.effective_cases / weight;
+        }
         (self.samples, self.unlike_reference) = (samples, unlike);
         Ok(())
     }
@@ -274,7 +282,7 @@ impl<'a> Evaluation<'a> {
         let mut values = vec![0.0; scored.coded.values.len()];
         let columns = RowColumns::new(batch, &self.places);
         for row in (0..batch.rows).filter(|&row| usable[row]) {
-            let (Some(category), Some(cases)) = (self.category(&columns, row), columns.cases(row)) else {
+            let (Some(category), Some(weight)) = (self.category(&columns, row), columns.weight(row)) else {
                 continue;
             };
             for (slot, column) in values.iter_mut().zip(&scored.coded.values) {
@@ -286,6 +294,7 @@ impl<'a> Evaluation<'a> {
                 ScoredRecord { log_odds: scored.log_odds_of(row), inputs: &inputs, terms: &terms[1..] };
             let number = first_row + row as u64;
             let held_out = self.fitted.split.holds_out(number, columns.id(row), columns.time(row));
+            let cases = weight * self.cases_per_weight;
             visit(&EvaluatedRow { record, category, cases, held_out }, scored.probabilities_of(row))?;
         }
         Ok(())
@@ -325,11 +334,14 @@ impl<'a> RowColumns<'a> {
         Some(times[row]).filter(|time| *time != MISSING_TIME)
     }
 
-    /// Cases that a row stands for; `None` where it stands for none.
-    fn cases(&self, row: usize) -> Option<f64> {
-        let Some(column) = self.places.count else { return Some(1.0) };
-        let count = self.batch.columns.get(column).and_then(Column::numbers)?[row];
-        (count > 0.0).then_some(count)
+    /// Cases that a row stands for, times its sampling weight; `None` where that is nothing.
+    fn weight(&self, row: usize) -> Option<f64> {
+        let number = |place: Option<usize>| match place {
+            None => Some(1.0),
+            Some(column) => self.batch.columns.get(column).and_then(Column::numbers).map(|cells| cells[row]),
+        };
+        let weight = number(self.places.count)? * number(self.places.weight)?;
+        (weight > 0.0).then_some(weight)
     }
 }
 

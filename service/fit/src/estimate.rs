@@ -44,6 +44,8 @@ pub(crate) enum Method {
         effective: Vec<f64>,
         sampling: Mat<f64>,
     },
+    /// The likelihood with half the log-determinant of the information added.
+    BiasReduced,
 }
 
 impl Solution {
@@ -67,11 +69,7 @@ pub(crate) fn estimate(
     let (mut at, products) = Likelihood::new(table, &layout, resolved).evaluate_with_products(&start)?;
     let swept = sweep(products.as_ref());
     if !swept.aliased.is_empty() {
-        let mut keep = vec![true; terms];
-        for aliased in &swept.aliased {
-            keep[aliased.column] = false;
-        }
-        layout = Layout::new(&resolved.design, &resolved.scaling, &keep);
+        layout = layout_after(resolved, &swept);
         start = start_of(&resolved.category_weights, layout.order());
         at = Likelihood::new(table, &layout, resolved).evaluate(&start, Order::Information)?;
     }
@@ -85,6 +83,15 @@ pub(crate) fn estimate(
         }
         Err(stopped) => Err(explain(resolved, &layout, stopped)),
     }
+}
+
+/// The layout of the terms that a sweep keeps.
+pub(crate) fn layout_after(resolved: &Resolved, swept: &Sweep) -> Layout {
+    let mut keep = vec![true; resolved.design.terms().len()];
+    for aliased in &swept.aliased {
+        keep[aliased.column] = false;
+    }
+    Layout::new(&resolved.design, &resolved.scaling, &keep)
 }
 
 /// Cross-products of all terms, up to a factor, in design order.

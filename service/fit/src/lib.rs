@@ -13,6 +13,7 @@ pub mod inference;
 pub mod plan;
 
 mod alias;
+mod bias_reduction;
 mod chunk;
 mod covariance;
 mod cross;

@@ -54,6 +54,12 @@ impl Factor {
         (0..right.len()).map(|row| solution[(row, 0)] * self.scale[row]).collect()
     }
 
+    /// Natural logarithm of the determinant of the matrix.
+    pub(crate) fn log_determinant(&self) -> f64 {
+        let of = |(row, scale): (usize, &f64)| 2.0 * (self.factor.L()[(row, row)] / scale).ln();
+        self.scale.iter().enumerate().map(of).sum()
+    }
+
     /// Inverse of the matrix, both triangles.
     pub(crate) fn inverse(&self) -> Mat<f64> {
         let inverse = self.factor.inverse();

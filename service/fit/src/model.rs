@@ -71,7 +71,7 @@ fn lower_triangle(covariance: &Mat<f64>) -> Covariance {
 fn figures(outcomes: &Outcomes, solution: &Solution) -> FitFigures {
     let optimum = &solution.optimum;
     let (ridge, effective) = match &solution.method {
-        Method::MaximumLikelihood => (0.0, None),
+        Method::MaximumLikelihood | Method::BiasReduced => (0.0, None),
         Method::Ridge { rho, effective, .. } => (*rho, Some(effective.iter().sum::<f64>())),
     };
     let Outcomes { plan, resolved, statistics, total, .. } = outcomes;

@@ -3,6 +3,7 @@
 use kilter_model::StandardErrors;
 
 use crate::analysis::Analysis;
+use crate::bias_reduction::estimate_bias_reduced;
 use crate::chunk::Chunk;
 use crate::covariance::{LEAST_CLUSTERS, clustered, robust};
 use crate::cross_validation::{CrossValidation, cross_validate, drawn_fold, grid, number_of_folds};
@@ -11,7 +12,7 @@ use crate::estimate::{Method, Solution, estimate};
 use crate::fitted::{Fitted, RidgeFigures};
 use crate::model::{Outcomes, model_file};
 use crate::newton::Iterate;
-use crate::plan::{HoldoutPlan, Plan, RidgePlan};
+use crate::plan::{BiasReductionPlan, HoldoutPlan, Plan, RidgePlan};
 use crate::raw::{BackTransform, describe};
 use crate::reader::{ReadStatistics, Reader};
 use crate::resolve::{Resolved, resolve};
@@ -141,7 +142,15 @@ impl<'a> Session<'a> {
         let (table, resolved) = (&mut self.table, &self.resolved);
         let mut validation = None;
         let solution = match self.plan.fit.ridge {
-            RidgePlan::Penalty(0.0) => estimate(table, resolved, &mut watch)?,
+            RidgePlan::Penalty(0.0) => match self.plan.fit.bias_reduction {
+                BiasReductionPlan::Always => estimate_bias_reduced(table, resolved, &mut watch)?,
+                reduction => match estimate(table, resolved, &mut watch) {
+                    Err(FitError::Separated(_)) if reduction == BiasReductionPlan::IfSeparated => {
+                        estimate_bias_reduced(table, resolved, &mut watch)?
+                    }
+                    estimated => estimated?,
+                },
+            },
             RidgePlan::Penalty(rho) => estimate_ridge(table, resolved, rho, &mut watch)?,
             RidgePlan::CrossValidate => {
                 let folds = number_of_folds(resolved);
@@ -203,6 +212,10 @@ impl<'a> Session<'a> {
                 names[term]
             )
         }));
+        if matches!(solution.method, Method::BiasReduced) {
+            warnings
+                .push("the estimate is bias-reduced (Firth 1993), not one of maximum likelihood".to_owned());
+        }
         if validation.as_ref().is_some_and(|validation| validation.at_end) {
             warnings.push(
                 "the smallest loss of the cross-validation lies at an end of the penalties tried".to_owned(),

@@ -26,6 +26,12 @@ pub enum LedgerError {
         /// The cause.
         source: Arc<rusqlite::Error>,
     },
+    /// The file is of another kind.
+    #[error("`{}` is no ledger; name another file, or move it away to have a ledger made", path.display())]
+    NoLedger {
+        /// The file.
+        path: PathBuf,
+    },
     /// The ledger was written by a later program.
     #[error("ledger `{}` has schema {found}, this build knows up to {known}; use the program that wrote it", path.display())]
     NewerSchema {
@@ -39,6 +45,12 @@ pub enum LedgerError {
     /// More is waiting to be written than the ledger takes at one time.
     #[error("the ledger has more to write than it takes at one time; try again in a moment")]
     Busy,
+    /// The writer could not be started.
+    #[error("the ledger's writer could not be started: {reason}")]
+    Thread {
+        /// Why not.
+        reason: String,
+    },
     /// The writer has ended.
     #[error("the ledger is closed")]
     Closed,
@@ -68,6 +80,36 @@ pub enum LedgerError {
         model: String,
         /// Fingerprint of the version.
         version: String,
+    },
+    /// A model file that the ledger cannot fold by.
+    #[error("the model file for `{model}` cannot be published: {reason}")]
+    ModelFile {
+        /// Name of the model.
+        model: String,
+        /// What is wrong with the file.
+        reason: String,
+    },
+    /// A live version cannot be retired.
+    #[error("version {version} of model `{model}` is live; make another version live first")]
+    LiveVersion {
+        /// Name of the model.
+        model: String,
+        /// Fingerprint of the version.
+        version: String,
+    },
+    /// There is nothing to go back to.
+    #[error("model `{model}` has no earlier live version to go back to")]
+    NoFormerVersion {
+        /// Name of the model.
+        model: String,
+    },
+    /// A copy of the ledger could not be written or read.
+    #[error("could not copy the ledger to `{}`: {reason}", path.display())]
+    Copy {
+        /// Where to.
+        path: PathBuf,
+        /// Why not.
+        reason: String,
     },
 }
 

@@ -1,14 +1,15 @@
 //! Folding records and outcomes into window summaries. The same code serves the writer, which
 //! folds as things come, and the verification, which folds everything anew.
 
-use std::collections::{BTreeMap, HashMap, HashSet};
+use std::collections::hash_map::Entry;
+use std::collections::{HashMap, HashSet};
 use std::sync::Arc;
 
 use kilter_drift::{Detail, DriftError, Frame, ScoredRecord, Summary};
 use kilter_model::{Coder, Design, ModelFile};
 
 use crate::error::LedgerError;
-use crate::types::Stream;
+use crate::types::{NewRecord, ShadowScore, Stream};
 
 /// Values of one segment field that have summaries of their own; later ones share one.
 pub const MOST_SEGMENT_VALUES: usize = 200;
@@ -29,8 +30,7 @@ pub fn day_of(micros: i64) -> i64 {
 pub(crate) struct FoldedVersion {
     pub(crate) number: i64,
     pub(crate) frame: Frame,
-    pub(crate) categories: Vec<String>,
-    segments: Vec<String>,
+    pub(crate) segments: Vec<String>,
     coder: Coder,
     design: Design,
 }
@@ -38,169 +38,245 @@ pub(crate) struct FoldedVersion {
 impl FoldedVersion {
     /// From the text of a model file.
     pub(crate) fn new(number: i64, file: &str) -> Result<Self, LedgerError> {
-        let damaged = |reason: String| LedgerError::damaged("a model file", reason);
-        let model = ModelFile::from_json(file).map_err(|error| damaged(error.to_string()))?;
-        let frame = Frame::new(&model).map_err(|error| damaged(error.to_string()))?;
-        let design = Design::of_model(&model).map_err(|error| damaged(error.to_string()))?;
-        Ok(Self {
-            number,
-            frame,
-            coder: Coder::new(&model.fields),
-            design,
-            categories: model.outcome.categories,
-            segments: model.monitor.segments,
-        })
+        let model =
+            ModelFile::from_json(file).map_err(|error| LedgerError::damaged("a model file", error))?;
+        Self::of_model(number, model)
+    }
+
+    /// From a model file that was read.
+    pub(crate) fn of_model(number: i64, model: ModelFile) -> Result<Self, LedgerError> {
+        let design = Design::of_model(&model).map_err(|error| LedgerError::damaged("a model file", error))?;
+        let frame = Frame::new(&model).map_err(|error| LedgerError::damaged("a model file", error))?;
+        Ok(Self { number, frame, coder: Coder::new(&model.fields), design, segments: model.monitor.segments })
     }
 
     /// The terms of a record without the intercept: where the records have moved in them, the
-    /// training uncertainty of the model counts for more.
-    fn terms(&self, inputs: &[f64]) -> Vec<f64> {
+    /// training uncertainty of the model counts for more. Empty for inputs that have no terms; a
+    /// summary takes these records without them.
+    pub(crate) fn terms(&self, inputs: &[f64]) -> Vec<f64> {
+        if inputs.len() != self.design.fields().len() {
+            return Vec::new();
+        }
         let (mut values, mut dense) = (vec![0.0; inputs.len()], vec![0.0; self.design.dense().len()]);
         let mut terms = vec![0.0; self.design.terms().len()];
         self.coder.values_of(inputs, &mut values);
         self.design.fill_row(&values, &mut dense, &mut terms);
         terms.remove(0);
-        terms
+        if terms.iter().all(|term| term.is_finite()) { terms } else { Vec::new() }
     }
 
     /// Index of a category.
     pub(crate) fn category(&self, name: &str) -> Option<usize> {
-        self.categories.iter().position(|category| category == name)
+        self.frame.categories().iter().position(|category| category == name)
     }
 }
 
-/// A record as it is stored.
-#[derive(Debug, Clone, PartialEq)]
-pub(crate) struct StoredRecord {
-    pub(crate) id: String,
-    pub(crate) version: i64,
+/// A record as one version scored it.
+#[derive(Debug, Clone, Copy)]
+pub(crate) struct Case<'a> {
+    pub(crate) id: &'a str,
     pub(crate) time: i64,
-    pub(crate) log_odds: Vec<f64>,
-    pub(crate) inputs: Vec<f64>,
-    pub(crate) segments: Vec<String>,
+    pub(crate) log_odds: &'a [f64],
+    pub(crate) inputs: &'a [f64],
+    pub(crate) segments: &'a [String],
 }
 
-impl StoredRecord {
+impl<'a> Case<'a> {
+    pub(crate) fn of_record(record: &'a NewRecord) -> Self {
+        Self {
+            id: &record.id,
+            time: record.time,
+            log_odds: &record.log_odds,
+            inputs: &record.inputs,
+            segments: &record.segments,
+        }
+    }
+
+    pub(crate) fn of_shadow(id: &'a str, time: i64, score: &'a ShadowScore) -> Self {
+        Self { id, time, log_odds: &score.log_odds, inputs: &score.inputs, segments: &score.segments }
+    }
+
+    pub(crate) fn day(&self) -> i64 {
+        day_of(self.time)
+    }
+
     /// Hours from the record to its outcome.
     fn delay_in_hours(&self, observed_at: i64) -> f64 {
         (observed_at - self.time) as f64 / MICROS_PER_HOUR
     }
 }
 
-/// Version, day and stream of a summary.
-pub(crate) type WindowKey = (i64, i64, Stream);
-
 /// Something that happens to a window.
 #[derive(Debug, Clone, Copy)]
 pub(crate) enum Event {
     /// The record was scored.
     Scored,
+    /// The record was deleted, when it has no outcome any more.
+    Deleted,
     /// Its outcome became known.
     Outcome { category: usize, observed_at: i64 },
     /// A former outcome was withdrawn.
     Withdrawn { category: usize, observed_at: i64 },
 }
 
-/// Summaries at hand, those that were changed marked.
-#[derive(Debug, Default)]
-pub(crate) struct Windows {
-    summaries: HashMap<WindowKey, Summary>,
-    changed: HashSet<WindowKey>,
-    /// For each version and segment field the values that have summaries of their own.
-    values: HashMap<(i64, String), HashSet<String>>,
-}
-
-impl Windows {
-    /// Puts the known values of a version's segment fields in place.
-    pub(crate) fn set_values(&mut self, version: i64, streams: impl IntoIterator<Item = Stream>) {
-        for stream in streams {
-            if let Stream::Segment { field, value } = stream {
-                self.values.entry((version, field)).or_default().insert(value);
-            }
-        }
-    }
-
-    /// Folds an event of a record into its windows. `load` fetches a summary that is not at hand.
-    pub(crate) fn fold(
-        &mut self,
-        version: &FoldedVersion,
-        record: &StoredRecord,
-        event: Event,
-        mut load: impl FnMut(&WindowKey) -> Result<Option<Summary>, LedgerError>,
-    ) -> Result<(), LedgerError> {
-        let terms = match event {
-            Event::Scored => Vec::new(),
-            Event::Outcome { .. } | Event::Withdrawn { .. } => version.terms(&record.inputs),
-        };
-        for stream in self.streams(version, record) {
-            let detail = if stream == Stream::All { Detail::Full } else { Detail::Light };
-            let key = (version.number, day_of(record.time), stream);
-            if !self.summaries.contains_key(&key) {
-                let summary = load(&key)?.unwrap_or_else(|| Summary::new(&version.frame, detail));
-                self.summaries.insert(key.clone(), summary);
-            }
-            if let Some(summary) = self.summaries.get_mut(&key) {
-                apply(summary, &version.frame, record, &terms, event).map_err(|source| {
-                    LedgerError::Summary { id: record.id.clone(), source: Arc::new(source) }
-                })?;
-            }
-            self.changed.insert(key);
-        }
-        Ok(())
-    }
-
-    /// The changed summaries, which are then taken as written.
-    pub(crate) fn take_changed(&mut self) -> Vec<(WindowKey, Summary)> {
-        let changed = std::mem::take(&mut self.changed);
-        changed
-            .into_iter()
-            .filter_map(|key| self.summaries.get(&key).map(|s| (key.clone(), s.clone())))
-            .collect()
-    }
-
-    /// All summaries at hand, in the order of their keys.
-    pub(crate) fn into_summaries(self) -> BTreeMap<WindowKey, Summary> {
-        self.summaries.into_iter().collect()
-    }
-
-    /// Number of summaries at hand.
-    pub(crate) fn len(&self) -> usize {
-        self.summaries.len()
-    }
-
-    fn streams(&mut self, version: &FoldedVersion, record: &StoredRecord) -> Vec<Stream> {
-        let mut streams = vec![Stream::All];
-        for (field, value) in version.segments.iter().zip(&record.segments) {
-            let value = if value.is_empty() { NO_VALUE } else { value };
-            let known = self.values.entry((version.number, field.clone())).or_default();
-            let value = if known.contains(value) || known.len() < MOST_SEGMENT_VALUES {
-                value
-            } else {
-                OTHER_SEGMENTS
-            };
-            known.insert(value.to_owned());
-            streams.push(Stream::Segment { field: field.clone(), value: value.to_owned() });
-        }
-        streams
+impl Event {
+    /// Whether the terms of the record take part.
+    pub(crate) fn needs_terms(self) -> bool {
+        matches!(self, Self::Outcome { .. } | Self::Withdrawn { .. })
     }
 }
 
 fn apply(
     summary: &mut Summary,
     frame: &Frame,
-    record: &StoredRecord,
+    case: &Case,
     terms: &[f64],
     event: Event,
 ) -> Result<(), DriftError> {
-    let scored = ScoredRecord { log_odds: &record.log_odds, inputs: &record.inputs, terms };
+    let record = ScoredRecord { log_odds: case.log_odds, inputs: case.inputs, terms };
     match event {
-        Event::Scored => summary.add_scored(frame, &scored, 1.0),
+        Event::Scored => summary.add_scored(frame, &record, 1.0),
+        Event::Deleted => summary.remove_scored(frame, &record, 1.0),
         Event::Outcome { category, observed_at } => {
-            summary.add_outcome(frame, &scored, category, record.delay_in_hours(observed_at), 1.0)
+            summary.add_outcome(frame, &record, category, case.delay_in_hours(observed_at), 1.0)
         }
         Event::Withdrawn { category, observed_at } => {
-            summary.remove_outcome(frame, &scored, category, record.delay_in_hours(observed_at), 1.0)
+            summary.remove_outcome(frame, &record, category, case.delay_in_hours(observed_at), 1.0)
         }
+    }
+}
+
+/// Numbers of the streams of one version.
+#[derive(Debug, Default)]
+pub(crate) struct Streams {
+    all: Option<i64>,
+    /// For each segment field its values.
+    values: HashMap<String, HashMap<String, i64>>,
+}
+
+/// A stream that a record belongs to, in words that need not be copied.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub(crate) enum StreamName<'a> {
+    All,
+    Segment { field: &'a str, value: &'a str },
+}
+
+impl StreamName<'_> {
+    pub(crate) fn detail(self) -> Detail {
+        if self == StreamName::All { Detail::Full } else { Detail::Light }
+    }
+
+    pub(crate) fn to_stream(self) -> Stream {
+        match self {
+            StreamName::All => Stream::All,
+            StreamName::Segment { field, value } => {
+                Stream::Segment { field: field.to_owned(), value: value.to_owned() }
+            }
+        }
+    }
+}
+
+impl Streams {
+    pub(crate) fn insert(&mut self, stream: Stream, number: i64) {
+        match stream {
+            Stream::All => self.all = Some(number),
+            Stream::Segment { field, value } => {
+                self.values.entry(field).or_default().insert(value, number);
+            }
+        }
+    }
+
+    /// The streams of a case, each with its number where it has one already.
+    pub(crate) fn of<'a>(
+        &self,
+        version: &'a FoldedVersion,
+        case: &Case<'a>,
+    ) -> Vec<(StreamName<'a>, Option<i64>)> {
+        let segments = version.segments.iter().zip(case.segments).map(|(field, value)| {
+            let value = if value.is_empty() { NO_VALUE } else { value.as_str() };
+            let (value, number) = self.place(field, value);
+            (StreamName::Segment { field, value }, number)
+        });
+        std::iter::once((StreamName::All, self.all)).chain(segments).collect()
+    }
+
+    /// The value that a value is counted under.
+    fn place<'a>(&self, field: &str, value: &'a str) -> (&'a str, Option<i64>) {
+        let Some(known) = self.values.get(field) else { return (value, None) };
+        if let Some(number) = known.get(value) {
+            return (value, Some(*number));
+        }
+        let own = known.len() - usize::from(known.contains_key(OTHER_SEGMENTS));
+        if own < MOST_SEGMENT_VALUES {
+            (value, None)
+        } else {
+            (OTHER_SEGMENTS, known.get(OTHER_SEGMENTS).copied())
+        }
+    }
+}
+
+/// Stream and day of a summary.
+pub(crate) type WindowKey = (i64, i64);
+
+/// Summaries at hand, those that were changed marked.
+#[derive(Debug, Default)]
+pub(crate) struct Windows {
+    summaries: HashMap<WindowKey, Summary>,
+    changed: HashSet<WindowKey>,
+}
+
+impl Windows {
+    /// Folds an event of a case into a window. `load` fetches a summary that is not at hand.
+    pub(crate) fn fold(
+        &mut self,
+        (stream, detail): (i64, Detail),
+        version: &FoldedVersion,
+        case: &Case,
+        terms: &[f64],
+        event: Event,
+        load: impl FnOnce(WindowKey) -> Result<Option<Summary>, LedgerError>,
+    ) -> Result<(), LedgerError> {
+        let key = (stream, case.day());
+        let summary = match self.summaries.entry(key) {
+            Entry::Occupied(entry) => entry.into_mut(),
+            Entry::Vacant(entry) => {
+                entry.insert(load(key)?.unwrap_or_else(|| Summary::new(&version.frame, detail)))
+            }
+        };
+        self.changed.insert(key);
+        apply(summary, &version.frame, case, terms, event)
+            .map_err(|source| LedgerError::Summary { id: case.id.to_owned(), source: Arc::new(source) })
+    }
+
+    /// The changed summaries, in the order of their keys.
+    pub(crate) fn changed(&self) -> impl Iterator<Item = (WindowKey, &Summary)> {
+        let mut keys: Vec<WindowKey> = self.changed.iter().copied().collect();
+        keys.sort_unstable();
+        keys.into_iter().filter_map(|key| self.summaries.get(&key).map(|summary| (key, summary)))
+    }
+
+    /// What was changed is on disk.
+    pub(crate) fn committed(&mut self) {
+        self.changed.clear();
+    }
+
+    /// What was changed is forgotten.
+    pub(crate) fn rolled_back(&mut self) {
+        for key in self.changed.drain() {
+            self.summaries.remove(&key);
+        }
+    }
+
+    pub(crate) fn remove(&mut self, key: WindowKey) -> Option<Summary> {
+        self.summaries.remove(&key)
+    }
+
+    pub(crate) fn keys(&self) -> impl Iterator<Item = WindowKey> {
+        self.summaries.keys().copied()
+    }
+
+    pub(crate) fn len(&self) -> usize {
+        self.summaries.len()
     }
 }
 
@@ -215,5 +291,21 @@ mod tests {
         {
             assert_eq!(day_of(micros), day, "{micros}");
         }
+    }
+
+    #[test]
+    fn values_beyond_the_two_hundredth_share_a_stream() {
+        let mut streams = Streams::default();
+        let segment = |value: &str| Stream::Segment { field: "depot".into(), value: value.into() };
+        for number in 0..MOST_SEGMENT_VALUES {
+            let value = format!("depot {number}");
+            assert_eq!(streams.place("depot", &value), (value.as_str(), None));
+            streams.insert(segment(&value), number as i64);
+        }
+        assert_eq!(streams.place("depot", "one more"), (OTHER_SEGMENTS, None));
+        streams.insert(segment(OTHER_SEGMENTS), 1000);
+        assert_eq!(streams.place("depot", "one more"), (OTHER_SEGMENTS, Some(1000)));
+        assert_eq!(streams.place("depot", "depot 7"), ("depot 7", Some(7)));
+        assert_eq!(streams.place("round", "one more"), ("one more", None));
     }
 }

@@ -1,39 +1,43 @@
 //! The handle: one writer thread with group commit, readers beside it.
 
 use std::fmt;
-use std::sync::mpsc::{Receiver, SyncSender, TrySendError, sync_channel};
-use std::sync::{Arc, Mutex, PoisonError};
-use std::thread::JoinHandle;
+use std::ops::ControlFlow;
+use std::path::Path;
+use std::sync::mpsc::sync_channel;
+use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
+
+use kilter_drift::Summary;
 
 use crate::error::LedgerError;
 use crate::sqlite::SqliteStore;
 use crate::store::{Job, Reader, Reply, Store};
-use crate::types::{VerifyDifference, VersionRow, VersionState, WindowSummary};
+use crate::types::{
+    AuditEntry, Counts, Pruned, RawOutcome, RawPair, RawRecord, Stream, VerifyDifference, VersionRow,
+    VersionState, WindowSummary,
+};
 use crate::url::LedgerUrl;
+use crate::writer::{Done, Writer};
 
 /// Settings of a ledger.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub struct Settings {
     /// Requests that wait for the writer at one time; more are answered [`LedgerError::Busy`].
     pub longest_queue: usize,
+    /// Rows that wait for the writer at one time; more are answered [`LedgerError::Busy`].
+    pub most_rows_queued: usize,
     /// Rows that one commit takes at most, unless a single request has more.
     pub rows_per_commit: usize,
 }
 
 impl Default for Settings {
     fn default() -> Self {
-        Self { longest_queue: 1024, rows_per_commit: 20_000 }
+        Self { longest_queue: 1024, most_rows_queued: 500_000, rows_per_commit: 20_000 }
     }
 }
 
-/// What is called when a request is on disk, or has failed.
-type Done = Box<dyn FnOnce(Result<Reply, LedgerError>) + Send>;
-
-/// A request on its way to the writer.
-struct Request {
-    job: Job,
-    done: Done,
-}
+/// Rows that are removed by one transaction of [`Ledger::prune`]: few enough that requests that
+/// come meanwhile hardly notice.
+const ROWS_PRUNED_AT_ONCE: u32 = 5_000;
 
 /// The ledger. Clones share the writer; when the last is dropped, what is queued is written and
 /// the writer ends.
@@ -43,9 +47,14 @@ pub struct Ledger {
 }
 
 struct Shared {
-    sender: Option<SyncSender<Request>>,
-    reader: Mutex<Box<dyn Reader>>,
-    writer: Option<JoinHandle<()>>,
+    writer: Writer,
+    /// Readers that are not in use; there is always one to make others from.
+    readers: Mutex<Readers>,
+}
+
+struct Readers {
+    first: Box<dyn Reader>,
+    idle: Vec<Box<dyn Reader>>,
 }
 
 impl fmt::Debug for Ledger {
@@ -70,13 +79,9 @@ impl Ledger {
     /// # Errors
     /// Where the store cannot be read, or no thread can be started.
     pub fn with_store(store: Box<dyn Store>, settings: Settings) -> Result<Self, LedgerError> {
-        let reader = Mutex::new(store.reader()?);
-        let (sender, receiver) = sync_channel(settings.longest_queue);
-        let writer = std::thread::Builder::new()
-            .name("ledger-writer".into())
-            .spawn(move || write_all(store, &receiver, settings.rows_per_commit))
-            .map_err(|error| LedgerError::damaged("no writer thread", error))?;
-        Ok(Self { shared: Arc::new(Shared { sender: Some(sender), reader, writer: Some(writer) }) })
+        let readers = Mutex::new(Readers { first: store.reader()?, idle: Vec::new() });
+        let writer = Writer::start(store, settings)?;
+        Ok(Self { shared: Arc::new(Shared { writer, readers }) })
     }
 
     /// Hands a job to the writer; `done` is called from its thread once the job is on disk, or has
@@ -89,11 +94,7 @@ impl Ledger {
         job: Job,
         done: impl FnOnce(Result<Reply, LedgerError>) + Send + 'static,
     ) -> Result<(), LedgerError> {
-        let sender = self.shared.sender.as_ref().ok_or(LedgerError::Closed)?;
-        sender.try_send(Request { job, done: Box::new(done) }).map_err(|refused| match refused {
-            TrySendError::Full(_) => LedgerError::Busy,
-            TrySendError::Disconnected(_) => LedgerError::Closed,
-        })
+        self.shared.writer.submit(job, Box::new(done))
     }
 
     /// Hands a job to the writer and waits until it is on disk.
@@ -101,14 +102,31 @@ impl Ledger {
     /// # Errors
     /// Where the job failed; nothing of it is kept then. A full queue is waited for.
     pub fn write(&self, job: Job) -> Result<Reply, LedgerError> {
-        let sender = self.shared.sender.as_ref().ok_or(LedgerError::Closed)?;
         let (answer, wait) = sync_channel(1);
         let done: Done = Box::new(move |reply| {
             // Nobody waits any more where the caller has gone.
             let _ = answer.send(reply);
         });
-        sender.send(Request { job, done }).map_err(|_| LedgerError::Closed)?;
+        self.shared.writer.wait_to_submit(job, done)?;
         wait.recv().map_err(|_| LedgerError::Closed)?
+    }
+
+    /// Removes raw records and outcomes of days before `before` (counted from 1970-01-01), some at
+    /// a time, so that other requests are written in between. Summaries stay.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be written; what is left is removed by the next call.
+    pub fn prune(&self, before: i64) -> Result<Pruned, LedgerError> {
+        let mut total = Pruned::default();
+        loop {
+            let reply = self.write(Job::Prune { before, most_rows: ROWS_PRUNED_AT_ONCE })?;
+            let Reply::Pruned(pruned) = reply else { return Err(LedgerError::Closed) };
+            total.records += pruned.records;
+            total.outcomes += pruned.outcomes;
+            if !pruned.more {
+                return Ok(total);
+            }
+        }
     }
 
     /// All versions in a state, the oldest first; all versions without one.
@@ -117,6 +135,30 @@ impl Ledger {
     /// Where the ledger cannot be read.
     pub fn versions(&self, state: Option<VersionState>) -> Result<Vec<VersionRow>, LedgerError> {
         self.read(|reader| reader.versions(state))
+    }
+
+    /// The live version of a model.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be read.
+    pub fn live(&self, model: &str) -> Result<Option<VersionRow>, LedgerError> {
+        Ok(self.versions(Some(VersionState::Live))?.into_iter().find(|version| version.model == model))
+    }
+
+    /// The audit trail of a model, the oldest entry first.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be read.
+    pub fn audit(&self, model: &str) -> Result<Vec<AuditEntry>, LedgerError> {
+        self.read(|reader| reader.audit(model))
+    }
+
+    /// Streams of a version: all records first, then segments by field and value.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be read.
+    pub fn streams(&self, model: &str, version: &str) -> Result<Vec<Stream>, LedgerError> {
+        self.read(|reader| reader.streams(model, version))
     }
 
     /// Window summaries of a version from one day to another, both included; days are counted from
@@ -130,7 +172,41 @@ impl Ledger {
         version: &str,
         days: [i64; 2],
     ) -> Result<Vec<WindowSummary>, LedgerError> {
-        self.read(|reader| reader.summaries(model, version, days))
+        self.read(|reader| reader.summaries(model, version, None, days))
+    }
+
+    /// Window summaries of one stream of a version.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be read.
+    pub fn summaries_of(
+        &self,
+        model: &str,
+        version: &str,
+        stream: &Stream,
+        days: [i64; 2],
+    ) -> Result<Vec<WindowSummary>, LedgerError> {
+        self.read(|reader| reader.summaries(model, version, Some(stream), days))
+    }
+
+    /// The windows of one stream of a version added up; `None` where there are none. Delays of
+    /// outcomes by category are in it.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be read.
+    pub fn merged(
+        &self,
+        model: &str,
+        version: &str,
+        stream: &Stream,
+        days: [i64; 2],
+    ) -> Result<Option<Summary>, LedgerError> {
+        let mut windows = self.summaries_of(model, version, stream, days)?.into_iter();
+        let Some(mut merged) = windows.next().map(|window| window.summary) else { return Ok(None) };
+        for window in windows {
+            merged.merge(&window.summary).map_err(|error| LedgerError::damaged("summaries", error))?;
+        }
+        Ok(Some(merged))
     }
 
     /// First and last day with records of a version; `None` where it has none.
@@ -141,12 +217,66 @@ impl Ledger {
         self.read(|reader| reader.days(model, version))
     }
 
-    /// Records that wait for their outcome.
+    /// Records of all models that wait for their outcome.
     ///
     /// # Errors
     /// Where the ledger cannot be read.
     pub fn waiting_records(&self) -> Result<u64, LedgerError> {
         self.read(|reader| reader.waiting_records())
+    }
+
+    /// How much the ledger holds of a model.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be read.
+    pub fn counts(&self, model: &str) -> Result<Counts, LedgerError> {
+        self.read(|reader| reader.counts(model))
+    }
+
+    /// Visits the records that a version scored, as live version or as shadow, with times from
+    /// `period[0]` to before `period[1]` (microseconds since 1970), day by day, until told to stop.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be read.
+    pub fn records(
+        &self,
+        model: &str,
+        version: &str,
+        period: [i64; 2],
+        mut visit: impl FnMut(RawRecord) -> ControlFlow<()>,
+    ) -> Result<(), LedgerError> {
+        self.read(|reader| reader.records(model, version, period, &mut visit))
+    }
+
+    /// Visits the records that `version` answered and `shadow` scored beside it.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be read.
+    pub fn pairs(
+        &self,
+        model: &str,
+        version: &str,
+        shadow: &str,
+        period: [i64; 2],
+        mut visit: impl FnMut(RawPair) -> ControlFlow<()>,
+    ) -> Result<(), LedgerError> {
+        self.read(|reader| reader.pairs(model, version, shadow, period, &mut visit))
+    }
+
+    /// A record by its id, as the version that answered scored it.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be read.
+    pub fn record(&self, model: &str, id: &str) -> Result<Option<RawRecord>, LedgerError> {
+        self.read(|reader| reader.record(model, id))
+    }
+
+    /// What the outcome of a record was before it was corrected, the oldest first.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be read.
+    pub fn former_outcomes(&self, model: &str, id: &str) -> Result<Vec<RawOutcome>, LedgerError> {
+        self.read(|reader| reader.former_outcomes(model, id))
     }
 
     /// Computes all summaries anew from the raw records and gives what differs: counts exactly,
@@ -158,54 +288,33 @@ impl Ledger {
         self.read(|reader| reader.verify())
     }
 
+    /// Writes a consistent copy of the ledger to a file while writing goes on. A file that is there
+    /// is replaced when the copy is whole.
+    ///
+    /// # Errors
+    /// [`LedgerError::Copy`] where the copy cannot be written.
+    pub fn backup(&self, path: &Path) -> Result<(), LedgerError> {
+        self.read(|reader| reader.backup(path))
+    }
+
+    /// Asks a reader that nobody else uses meanwhile.
     fn read<T>(
         &self,
         question: impl FnOnce(&dyn Reader) -> Result<T, LedgerError>,
     ) -> Result<T, LedgerError> {
-        let reader = self.shared.reader.lock().unwrap_or_else(PoisonError::into_inner);
-        question(reader.as_ref())
-    }
-}
-
-impl Drop for Shared {
-    fn drop(&mut self) {
-        // Without a sender the writer ends when its queue is empty.
-        drop(self.sender.take());
-        if let Some(writer) = self.writer.take()
-            && writer.join().is_err()
-        {
-            tracing::error!("the ledger's writer had panicked");
-        }
-    }
-}
-
-/// Takes requests as they come and commits those that are waiting together.
-fn write_all(mut store: Box<dyn Store>, receiver: &Receiver<Request>, rows_per_commit: usize) {
-    while let Ok(first) = receiver.recv() {
-        let mut rows = first.job.size();
-        let (mut jobs, mut waiting) = (vec![first.job], vec![first.done]);
-        while rows < rows_per_commit
-            && let Ok(next) = receiver.try_recv()
-        {
-            rows += next.job.size();
-            jobs.push(next.job);
-            waiting.push(next.done);
-        }
-        commit(store.as_mut(), &jobs, waiting);
-    }
-}
-
-/// Commits jobs together. Where that fails, each is tried by itself, so that one that cannot be
-/// written does not take the others with it.
-fn commit(store: &mut dyn Store, jobs: &[Job], waiting: Vec<Done>) {
-    match store.commit(jobs) {
-        Ok(replies) => waiting.into_iter().zip(replies).for_each(|(done, reply)| done(Ok(reply))),
-        Err(error) if jobs.len() == 1 => waiting.into_iter().for_each(|done| done(Err(error.clone()))),
-        Err(_) => {
-            for (job, done) in jobs.iter().zip(waiting) {
-                let reply = store.commit(std::slice::from_ref(job));
-                done(reply.and_then(|replies| replies.into_iter().next().ok_or(LedgerError::Closed)));
+        let reader = {
+            let mut readers = self.readers();
+            match readers.idle.pop() {
+                Some(reader) => reader,
+                None => readers.first.another()?,
             }
-        }
+        };
+        let answer = question(reader.as_ref())?;
+        self.readers().idle.push(reader);
+        Ok(answer)
+    }
+
+    fn readers(&self) -> MutexGuard<'_, Readers> {
+        self.shared.readers.lock().unwrap_or_else(PoisonError::into_inner)
     }
 }

@@ -7,23 +7,31 @@
 //!   corrected; the summaries follow in the same transaction.
 //! * A window is a UTC day of record time. Its summaries are always what a recomputation from the
 //!   raw records would give; [`Ledger::verify`] compares.
+//! * Raw records may be removed by age; the summaries of their days stay and are final. A record or
+//!   outcome that comes later for such a day is kept, but is in no summary.
 //!
 //! The crate knows no clock: whoever calls says when things happen.
 
+mod compare;
 mod error;
 mod fold;
 mod ledger;
 mod sqlite;
 mod store;
+#[cfg(test)]
+mod tests;
 mod types;
 mod url;
+mod writer;
 
 pub use error::LedgerError;
 pub use fold::{MOST_SEGMENT_VALUES, OTHER_SEGMENTS, day_of};
 pub use ledger::{Ledger, Settings};
+pub use sqlite::restore;
 pub use store::{Job, Reader, Reply, Store};
 pub use types::{
-    FileEntry, FileStart, NewOutcome, NewRecord, OutcomeState, Outcomes, Records, Stream, VerifyDifference,
-    VersionRow, VersionState, WindowSummary,
+    Act, AuditEntry, Counts, FileEntry, FileStart, NewOutcome, NewRecord, OutcomeState, Outcomes, Pruned,
+    RawOutcome, RawPair, RawRecord, Records, ShadowScore, ShadowScores, Stream, VerifyDifference,
+    VersionChange, VersionRow, VersionState, WindowSummary,
 };
 pub use url::LedgerUrl;

@@ -1,10 +1,12 @@
 //! What every store of the ledger can do.
 
-use kilter_drift::Summary;
+use std::ops::ControlFlow;
+use std::path::Path;
 
 use crate::error::LedgerError;
 use crate::types::{
-    FileEntry, FileStart, OutcomeState, Outcomes, Records, VerifyDifference, VersionRow, VersionState,
+    Act, AuditEntry, Counts, FileEntry, FileStart, OutcomeState, Outcomes, Pruned, RawOutcome, RawPair,
+    RawRecord, Records, ShadowScores, Stream, VerifyDifference, VersionChange, VersionRow, VersionState,
     WindowSummary,
 };
 
@@ -13,6 +15,13 @@ use crate::types::{
 pub enum Job {
     /// Keep scored records.
     Records(Records),
+    /// Keep scored records together with what shadow versions made of them.
+    RecordsWithShadows {
+        /// The records, as the version that answers scored them.
+        records: Records,
+        /// What shadow versions made of the same records, in the same order.
+        shadows: Vec<ShadowScores>,
+    },
     /// Keep outcomes.
     Outcomes(Outcomes),
     /// Make a model file a version; a live one retires the version that was live.
@@ -21,6 +30,33 @@ pub enum Job {
         version: VersionRow,
         /// Who asked for it.
         who: String,
+    },
+    /// Change what versions do.
+    ChangeVersion {
+        /// Name of the model.
+        model: String,
+        /// The change.
+        change: VersionChange,
+        /// Who, when and why.
+        act: Act,
+    },
+    /// Forget records by their ids: record, scores, outcome and its history, and their share of the
+    /// summaries. The audit trail says that it was done, but no ids.
+    Delete {
+        /// Name of the model.
+        model: String,
+        /// The ids.
+        ids: Vec<String>,
+        /// Who, when and why.
+        act: Act,
+    },
+    /// Remove raw records and outcomes of days before `before`; their summaries stay and are final
+    /// from then on.
+    Prune {
+        /// First day that is kept, counted from 1970-01-01.
+        before: i64,
+        /// Most rows of each kind that are removed at one time.
+        most_rows: u32,
     },
     /// Take up a file, or learn what is known of its content.
     BeginFile(FileStart),
@@ -39,9 +75,14 @@ impl Job {
     /// Rows that the job writes: what a commit is filled up by.
     pub(crate) fn size(&self) -> usize {
         match self {
-            Self::Records(records) => records.records.len(),
+            Self::Records(records) | Self::RecordsWithShadows { records, .. } => records.records.len(),
             Self::Outcomes(outcomes) => outcomes.outcomes.len(),
-            Self::Publish { .. } | Self::BeginFile(_) | Self::FinishFile { .. } => 1,
+            Self::Delete { ids, .. } => ids.len(),
+            Self::Prune { most_rows, .. } => *most_rows as usize,
+            Self::Publish { .. }
+            | Self::ChangeVersion { .. }
+            | Self::BeginFile(_)
+            | Self::FinishFile { .. } => 1,
         }
     }
 }
@@ -55,6 +96,12 @@ pub enum Reply {
     Outcomes(Vec<OutcomeState>),
     /// The version is published.
     Published,
+    /// The version that was changed, as it is now.
+    Changed(VersionRow),
+    /// For each id whether there was something to delete.
+    Deleted(Vec<bool>),
+    /// What was removed because of its age.
+    Pruned(Pruned),
     /// What was known of the file's content before; `None` where it is new.
     File(Option<FileEntry>),
     /// The file is finished.
@@ -69,6 +116,12 @@ pub trait Store: Send {
     /// Where anything failed: nothing of any of the jobs is kept then.
     fn commit(&mut self, jobs: &[Job]) -> Result<Vec<Reply>, LedgerError>;
 
+    /// Housekeeping between commits, when the replies have been given.
+    ///
+    /// # Errors
+    /// Where it failed; nothing is lost then, and it is tried again later.
+    fn maintain(&mut self) -> Result<(), LedgerError>;
+
     /// A reader of what is committed.
     ///
     /// # Errors
@@ -76,66 +129,69 @@ pub trait Store: Send {
     fn reader(&self) -> Result<Box<dyn Reader>, LedgerError>;
 }
 
-/// Reads what is committed.
+/// Reads what is committed. Every method sees the ledger as of one moment, but for those that
+/// visit raw records and [`Reader::verify`]: these see each day as of one moment.
 pub trait Reader: Send {
+    /// Another reader of the same store.
+    fn another(&self) -> Result<Box<dyn Reader>, LedgerError>;
+
     /// All versions in a state, the oldest first.
     fn versions(&self, state: Option<VersionState>) -> Result<Vec<VersionRow>, LedgerError>;
 
-    /// Window summaries of a version from one day to another, both included.
+    /// The audit trail of a model, the oldest entry first.
+    fn audit(&self, model: &str) -> Result<Vec<AuditEntry>, LedgerError>;
+
+    /// Streams of a version: all records first, then segments by field and value.
+    fn streams(&self, model: &str, version: &str) -> Result<Vec<Stream>, LedgerError>;
+
+    /// Window summaries of a version from one day to another, both included, of one stream or of
+    /// all streams; ordered by day, then by stream.
     fn summaries(
         &self,
         model: &str,
         version: &str,
+        stream: Option<&Stream>,
         days: [i64; 2],
     ) -> Result<Vec<WindowSummary>, LedgerError>;
 
     /// First and last day with records of a version.
     fn days(&self, model: &str, version: &str) -> Result<Option<[i64; 2]>, LedgerError>;
 
-    /// Records that wait for their outcome.
+    /// Records of all models that wait for their outcome.
     fn waiting_records(&self) -> Result<u64, LedgerError>;
+
+    /// How much the ledger holds of a model.
+    fn counts(&self, model: &str) -> Result<Counts, LedgerError>;
+
+    /// Visits the records that a version scored, as live version or as shadow, with times from
+    /// `period[0]` to before `period[1]` (microseconds since 1970), day by day.
+    fn records(
+        &self,
+        model: &str,
+        version: &str,
+        period: [i64; 2],
+        visit: &mut dyn FnMut(RawRecord) -> ControlFlow<()>,
+    ) -> Result<(), LedgerError>;
+
+    /// Visits the records that `version` answered and `shadow` scored beside it.
+    fn pairs(
+        &self,
+        model: &str,
+        version: &str,
+        shadow: &str,
+        period: [i64; 2],
+        visit: &mut dyn FnMut(RawPair) -> ControlFlow<()>,
+    ) -> Result<(), LedgerError>;
+
+    /// A record by its id.
+    fn record(&self, model: &str, id: &str) -> Result<Option<RawRecord>, LedgerError>;
+
+    /// What the outcome of a record was before it was corrected, the oldest first.
+    fn former_outcomes(&self, model: &str, id: &str) -> Result<Vec<RawOutcome>, LedgerError>;
 
     /// Compares all summaries with what the raw records give: counts exactly, sums to 1e-9.
     fn verify(&self) -> Result<Vec<VerifyDifference>, LedgerError>;
-}
 
-/// Why two summaries of the same records differ by more than the order of addition explains.
-pub(crate) fn difference(stored: &Summary, computed: &Summary) -> Option<String> {
-    const RELATIVE: f64 = 1e-9;
-    let (Ok(stored), Ok(computed)) = (serde_json::to_value(stored), serde_json::to_value(computed)) else {
-        return Some("a summary cannot be written".into());
-    };
-    differing_place(&stored, &computed, RELATIVE, "")
-}
-
-/// Sums that cancel are compared on the scale of a record's contribution.
-const SCALE_OF_A_RECORD: f64 = 1.0;
-
-fn differing_place(
-    a: &serde_json::Value,
-    b: &serde_json::Value,
-    relative: f64,
-    place: &str,
-) -> Option<String> {
-    use serde_json::Value;
-    match (a, b) {
-        (Value::Number(left), Value::Number(right)) => {
-            let (left, right) = (left.as_f64()?, right.as_f64()?);
-            let scale = left.abs().max(right.abs()).max(SCALE_OF_A_RECORD);
-            ((left - right).abs() > relative * scale)
-                .then(|| format!("{place}: {left} stored, {right} computed"))
-        }
-        (Value::Array(left), Value::Array(right)) if left.len() == right.len() => {
-            left.iter().zip(right).enumerate().find_map(|(index, (left, right))| {
-                differing_place(left, right, relative, &format!("{place}[{index}]"))
-            })
-        }
-        (Value::Object(left), Value::Object(right)) if left.len() == right.len() => {
-            left.iter().find_map(|(key, left)| {
-                let right = right.get(key).unwrap_or(&Value::Null);
-                differing_place(left, right, relative, &format!("{place}.{key}"))
-            })
-        }
-        _ => (a != b).then(|| format!("{place}: {a} stored, {b} computed")),
-    }
+    /// Writes a consistent copy of the whole ledger while writing goes on.
+    fn backup(&self, path: &Path) -> Result<(), LedgerError>;
 }

@@ -176,3 +176,125 @@ pub struct VerifyDifference {
     /// What differs.
     pub reason: String,
 }
+
+/// What a shadow version made of one record.
+#[derive(Debug, Clone, PartialEq)]
+pub struct ShadowScore {
+    /// Log-odds against the reference category, J-1 in the order of the shadow version.
+    pub log_odds: Vec<f64>,
+    /// One input per field of the shadow version.
+    pub inputs: Vec<f64>,
+    /// One value per segment field of the shadow version; empty where the record has none.
+    pub segments: Vec<String>,
+}
+
+/// What a shadow version made of the records of a request.
+#[derive(Debug, Clone, PartialEq)]
+pub struct ShadowScores {
+    /// Fingerprint of the shadow version.
+    pub version: String,
+    /// One entry per record of the request; `None` where the version refused the record.
+    pub scores: Vec<Option<ShadowScore>>,
+}
+
+/// A change of what versions do.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub enum VersionChange {
+    /// The version becomes live; the one that was live is retired.
+    Promote(String),
+    /// The version that was live before becomes live again; done again, it goes back further.
+    Rollback,
+    /// The version is retired, which ends a shadow. A live version cannot be retired.
+    Retire(String),
+}
+
+/// Who did something, when and why.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Act {
+    /// When, microseconds since 1970.
+    pub at: i64,
+    /// Who asked for it.
+    pub who: String,
+    /// Why; may be empty.
+    pub why: String,
+}
+
+/// A line of the audit trail.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct AuditEntry {
+    /// Who, when and why.
+    pub act: Act,
+    /// Name of the model.
+    pub model: String,
+    /// What was done.
+    pub what: String,
+    /// Fingerprint of the version that was live before.
+    pub from: Option<String>,
+    /// Fingerprint of the version that it was done to.
+    pub to: Option<String>,
+}
+
+/// What was removed because of its age.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
+pub struct Pruned {
+    /// Records.
+    pub records: u64,
+    /// Outcomes, those that waited for a record among them.
+    pub outcomes: u64,
+    /// Whether there is more to remove.
+    pub more: bool,
+}
+
+/// How much the ledger holds of a model.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
+pub struct Counts {
+    /// Records that were taken in, pruned ones included, deleted ones not.
+    pub records: u64,
+    /// Those of them with an outcome.
+    pub matched: u64,
+    /// Records at hand without an outcome.
+    pub waiting_records: u64,
+    /// Outcomes whose record has not come.
+    pub waiting_outcomes: u64,
+    /// First and last day of record time, counted from 1970-01-01.
+    pub days: Option<[i64; 2]>,
+}
+
+/// A record as it is kept, handed to whoever reads the raw records.
+#[derive(Debug, Clone, PartialEq)]
+pub struct RawRecord {
+    /// Its id.
+    pub id: String,
+    /// Its time, microseconds since 1970.
+    pub time: i64,
+    /// When it was received, microseconds since 1970.
+    pub received: i64,
+    /// Log-odds against the reference category, J-1 in the order of the version.
+    pub log_odds: Vec<f64>,
+    /// One input per field of the version.
+    pub inputs: Vec<f64>,
+    /// One value per segment field of the version.
+    pub segments: Vec<String>,
+    /// Its outcome, where it is known.
+    pub outcome: Option<RawOutcome>,
+}
+
+/// The outcome of a record as it is kept.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct RawOutcome {
+    /// The category.
+    pub category: String,
+    /// When it was observed, microseconds since 1970.
+    pub observed_at: i64,
+    /// When it was received, microseconds since 1970.
+    pub received: i64,
+}
+
+/// A record as the live version and a shadow version scored it.
+#[derive(Debug, Clone, PartialEq)]
+pub struct RawPair {
+    /// As the version that answered scored it.
+    pub record: RawRecord,
+    /// What the shadow version made of it.
+    pub shadow: ShadowScore,
+}

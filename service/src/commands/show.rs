@@ -46,13 +46,14 @@ fn as_json(model: &ModelFile, estimates: &[Estimate]) -> Value {
 /// One coefficient with everything that is known of it.
 pub(super) fn estimate_as_json(estimate: &Estimate) -> Value {
     let uncertainty = estimate.uncertainty.as_ref();
+    let significance = uncertainty.and_then(|u| u.significance.as_ref());
     json!({
         "term": estimate.term,
         "estimate": estimate.estimate,
         "standard_error": uncertainty.map(|u| u.standard_error),
-        "z": uncertainty.map(|u| u.z),
-        "p": uncertainty.map(|u| u.p),
-        "log10_p": uncertainty.map(|u| u.log10_p),
+        "z": significance.map(|s| s.z),
+        "p": significance.map(|s| s.p),
+        "log10_p": significance.map(|s| s.log10_p),
         "interval": uncertainty.map(|u| u.interval),
         "odds_ratio": estimate.ratio(),
         "odds_ratio_interval": estimate.ratio_interval(),
@@ -101,13 +102,14 @@ pub(super) fn estimates_as_table(estimates: &[&Estimate]) -> Table {
     for estimate in estimates {
         let dash = || "–".to_owned();
         let uncertainty = estimate.uncertainty.as_ref();
+        let significance = uncertainty.and_then(|u| u.significance.as_ref());
         table.row(vec![
             estimate.term.clone(),
             format!("{:.4}", estimate.estimate),
             uncertainty.map_or_else(dash, |u| format!("{:.4}", u.standard_error)),
-            uncertainty.map_or_else(dash, |u| format!("{:.2}", u.z)),
-            uncertainty
-                .map_or_else(dash, |u| if u.p < 1e-4 { "< 0.0001".into() } else { format!("{:.4}", u.p) }),
+            significance.map_or_else(dash, |s| format!("{:.2}", s.z)),
+            significance
+                .map_or_else(dash, |s| if s.p < 1e-4 { "< 0.0001".into() } else { format!("{:.4}", s.p) }),
             estimate.ratio().map_or_else(dash, |ratio| format!("{ratio:.3}")),
             estimate.ratio_interval().map_or_else(dash, |[low, high]| format!("{low:.3} to {high:.3}")),
         ]);

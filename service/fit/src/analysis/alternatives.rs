@@ -146,14 +146,14 @@ impl Merge for Contributions {
 
 impl Analysis<'_> {
     /// Tests the independence of irrelevant alternatives, leaving out each category in turn. Takes
-    /// a good many fits. Empty for two categories, and with sampling weights.
+    /// a good many fits. Empty for two categories, with sampling weights and for a penalised fit.
     ///
     /// # Errors
     /// [`FitError`] where the rows cannot be read.
     pub fn independence(&mut self) -> Result<Vec<IndependenceTest>, FitError> {
         let categories = self.compared() + 1;
         let mut tests = Vec::new();
-        if categories < 3 || self.plan.data.weight.is_some() {
+        if categories < 3 || !self.counts_cases() {
             return Ok(tests);
         }
         for left_out in 0..categories {
@@ -168,13 +168,14 @@ impl Analysis<'_> {
     }
 
     /// Fits each category separately against the reference; leaves out those for which that has no
-    /// estimate. Empty with sampling weights.
+    /// estimate. Empty with sampling weights and for a
+    /// penalised fit.
     ///
     /// # Errors
     /// [`FitError`] where the rows cannot be read.
     pub fn separate_fits(&mut self) -> Result<Vec<SeparateFit>, FitError> {
         let mut found = Vec::new();
-        if self.plan.data.weight.is_some() {
+        if !self.counts_cases() {
             return Ok(found);
         }
         for category in 1..=self.compared() {

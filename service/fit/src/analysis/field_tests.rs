@@ -6,9 +6,10 @@ use faer::Mat;
 use kilter_model::{Design, Field, Form, StandardErrors};
 
 use crate::analysis::Analysis;
+use crate::bias_reduction::BiasReduction;
 use crate::covariance::FEW_CLUSTERS;
 use crate::error::FitError;
-use crate::estimate::estimate_without;
+use crate::estimate::{Method, estimate_without};
 use crate::linear::{Factor, dot};
 
 /// What is tested to be without effect.
@@ -75,8 +76,8 @@ pub struct FieldTest {
     /// Wald test `b_f' V_ff^-1 b_f` with the covariance of the model file; `None` where that has
     /// too small a rank.
     pub wald: Option<TestResult>,
-    /// Likelihood-ratio test `2 (ll - ll without)`; `None` with sampling weights or clusters,
-    /// where the likelihood is none.
+    /// Likelihood-ratio test `2 (ll - ll without)`, for a bias-reduced fit that of the adjusted
+    /// likelihoods; `None` with sampling weights or clusters, where the likelihood is none.
     pub likelihood_ratio: Option<TestResult>,
     /// With few clusters: whether there are too few for the F distribution to be more than a
     /// rough guide.
@@ -97,12 +98,15 @@ impl FieldTest {
 impl Analysis<'_> {
     /// Tests each field, each curved form, each interaction, and everything together.
     ///
-    /// Each likelihood ratio takes a fit of its own, which starts near its end.
+    /// Empty for a penalised fit. Each likelihood ratio takes a fit of its own, which starts near its end.
     ///
     /// # Errors
     /// [`FitError`] where the rows cannot be read, or a smaller model has no estimate.
     pub fn field_tests(&mut self) -> Result<Vec<FieldTest>, FitError> {
         let mut tests = Vec::new();
+        if matches!(self.solution.method, Method::Ridge { .. }) {
+            return Ok(tests);
+        }
         for (tested, gone) in hypotheses(&self.resolved.design, &self.plan.interactions) {
             if let Some(test) = self.test(tested, &gone)? {
                 tests.push(test);
@@ -114,6 +118,9 @@ impl Analysis<'_> {
     /// The tests of some terms; `None` where others determine all of them.
     fn test(&mut self, tested: Tested, gone: &[bool]) -> Result<Option<FieldTest>, FitError> {
         let full = self.solution.layout.terms();
+        if matches!(self.solution.method, Method::BiasReduced) {
+            return self.test_bias_reduced(tested, gone);
+        }
         let (kept, log_likelihood) = if tested == Tested::Everything {
             let null = self.fitted.model.fit.as_ref().map_or(f64::NAN, |fit| fit.log_likelihood_null);
             (1, Some(null))
@@ -142,16 +149,41 @@ impl Analysis<'_> {
         }))
     }
 
+    /// Tests of a bias-reduced fit: the ratio is that of the adjusted likelihoods, with the
+    /// information of the full model in both (Heinze and Schemper 2002).
+    fn test_bias_reduced(&mut self, tested: Tested, gone: &[bool]) -> Result<Option<FieldTest>, FitError> {
+        let held = self.coefficients_of(gone);
+        if held.is_empty() {
+            return Ok(None);
+        }
+        let restricted =
+            BiasReduction::new(&mut self.table, &self.solution.layout, &self.resolved).holding(&held);
+        let (optimum, _) = restricted.maximise(&mut |_, _| {})?;
+        let statistic = 2.0 * (self.solution.optimum.at.value - optimum.at.value);
+        let freedom = held.len() as f64;
+        Ok(Some(FieldTest {
+            tested,
+            degrees_of_freedom: held.len() as u64,
+            wald: self.wald(gone),
+            likelihood_ratio: Some(TestResult::new(statistic.max(0.0), Distribution::ChiSquared { freedom })),
+            approximate: false,
+        }))
+    }
+
+    /// The coefficients of some terms, as far as they were estimated.
+    fn coefficients_of(&self, terms: &[bool]) -> Vec<usize> {
+        let layout = &self.solution.layout;
+        let all = 0..self.solution.optimum.point.len();
+        all.filter(|index| terms[layout.order()[index % layout.terms()]]).collect()
+    }
+
     /// Whether the log-likelihood is one of independent cases.
     fn has_likelihood(&self) -> bool {
-        self.plan.data.weight.is_none() && self.plan.fit.standard_errors != StandardErrors::Cluster
+        self.counts_cases() && self.plan.fit.standard_errors != StandardErrors::Cluster
     }
 
     fn wald(&self, gone: &[bool]) -> Option<TestResult> {
-        let layout = &self.solution.layout;
-        let tested: Vec<usize> = (0..self.solution.optimum.point.len())
-            .filter(|index| gone[layout.order()[index % layout.terms()]])
-            .collect();
+        let tested = self.coefficients_of(gone);
         let freedom = tested.len() as f64;
         let clusters = self.covariance.clusters.map(|clusters| clusters as f64);
         if clusters.is_some_and(|clusters| clusters - 1.0 < freedom) {

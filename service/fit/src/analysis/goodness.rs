@@ -87,12 +87,12 @@ impl ObservedExpected {
 
 impl Analysis<'_> {
     /// The test of Hosmer and Lemeshow with 10 groups, or with 6 or 5 where 10 leave too few cases
-    /// in a cell; `None` where even 5 do, and with sampling weights.
+    /// in a cell; `None` where even 5 do, with sampling weights and for a penalised fit.
     ///
     /// # Errors
     /// [`FitError`] where the rows cannot be read.
     pub fn goodness_of_fit(&mut self) -> Result<Option<GoodnessOfFit>, FitError> {
-        if self.plan.data.weight.is_some() {
+        if !self.counts_cases() {
             return Ok(None);
         }
         let blocks = self.score_blocks()?;
@@ -100,12 +100,12 @@ impl Analysis<'_> {
     }
 
     /// The same with a number of groups of one's own, however few cases there are; `None` for less
-    /// than 3 groups, which leave no degree of freedom, and with sampling weights.
+    /// than 3 groups, which leave no degree of freedom, with sampling weights and for a penalised fit.
     ///
     /// # Errors
     /// As [`Self::goodness_of_fit`].
     pub fn goodness_of_fit_in(&mut self, groups: usize) -> Result<Option<GoodnessOfFit>, FitError> {
-        if self.plan.data.weight.is_some() {
+        if !self.counts_cases() {
             return Ok(None);
         }
         Ok(hosmer_lemeshow(&self.score_blocks()?, groups))
@@ -131,12 +131,12 @@ impl Analysis<'_> {
     }
 
     /// Deviance and Pearson's statistic over the distinct rows of fields; `None` where there are
-    /// too many of them, no degree of freedom is left, or the plan has sampling weights.
+    /// too many of them, no degree of freedom is left, or the fit has sampling weights or a penalty.
     ///
     /// # Errors
     /// [`FitError`] where the rows cannot be read.
     pub fn grouped_fit(&mut self) -> Result<Option<GroupedFit>, FitError> {
-        if self.plan.data.weight.is_some() {
+        if !self.counts_cases() {
             return Ok(None);
         }
         let (layout, coefficients) = (&self.solution.layout, self.solution.coefficients());

@@ -12,7 +12,7 @@ pub use field_tests::{Distribution, FieldTest, TestResult, Tested};
 pub use goodness::{GoodnessOfFit, GroupedFit, ObservedExpected};
 pub use statistics::{FitStatistics, fit_statistics};
 
-use crate::estimate::Solution;
+use crate::estimate::{Method, Solution};
 use crate::fitted::Fitted;
 use crate::plan::Plan;
 use crate::resolve::Resolved;
@@ -31,6 +31,11 @@ pub struct Analysis<'a> {
 }
 
 impl Analysis<'_> {
+    /// Whether the likelihood is one of cases that all count the same, and nothing else.
+    fn counts_cases(&self) -> bool {
+        self.plan.data.weight.is_none() && matches!(self.solution.method, Method::MaximumLikelihood)
+    }
+
     /// Number of categories but the reference.
     fn compared(&self) -> usize {
         self.resolved.category_weights.len() - 1

@@ -34,17 +34,24 @@ pub enum InferenceError {
 pub struct Uncertainty {
     /// Standard error.
     pub standard_error: f64,
+    /// Ends of the confidence interval.
+    pub interval: [f64; 2],
+    /// Test of the estimate being 0; `None` for a penalised fit, whose estimates are pulled
+    /// towards 0.
+    pub significance: Option<Significance>,
+}
+
+/// Test of an estimate being 0.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Significance {
     /// Estimate by standard error.
     pub z: f64,
-    /// Two-sided p-value of the estimate being 0: from the normal distribution, or, where the
-    /// standard errors are those of fewer than 50 clusters, from Student's t distribution with
-    /// one degree of freedom less than there are clusters. The former underflows to 0 for `z`
-    /// beyond 38.
+    /// Two-sided p-value: from the normal distribution, or, where the standard errors are those
+    /// of fewer than 50 clusters, from Student's t distribution with one degree of freedom less
+    /// than there are clusters. The former underflows to 0 for `z` beyond 38.
     pub p: f64,
     /// Its decimal logarithm, which does not underflow with the normal distribution.
     pub log10_p: f64,
-    /// Ends of the confidence interval.
-    pub interval: [f64; 2],
 }
 
 /// The log-odds of one category against another that a term adds, per unit of the term.
@@ -149,31 +156,36 @@ struct Measure {
     /// Degrees of freedom of Student's t; `None` for the normal distribution.
     freedom: Option<f64>,
     quantile: f64,
+    penalised: bool,
 }
 
 impl Measure {
     fn new(model: &ModelFile, level: f64) -> Self {
         let probability = 0.5 + level / 2.0;
         let clusters = model.fit.as_ref().and_then(|fit| fit.clusters);
+        let penalised = model.fit.as_ref().is_some_and(|fit| fit.ridge > 0.0);
         match clusters.filter(|&clusters| clusters < FEW_CLUSTERS) {
             Some(clusters) => {
                 let freedom = clusters as f64 - 1.0;
-                Self { freedom: Some(freedom), quantile: student::quantile(probability, freedom) }
+                Self { freedom: Some(freedom), quantile: student::quantile(probability, freedom), penalised }
             }
-            None => Self { freedom: None, quantile: normal_quantile(probability) },
+            None => Self { freedom: None, quantile: normal_quantile(probability), penalised },
         }
     }
 
     fn uncertainty(self, estimate: f64, standard_error: f64) -> Uncertainty {
-        let z = estimate / standard_error;
         let half = self.quantile * standard_error;
-        let (p, log10_p) = match self.freedom {
-            None => (two_sided_p(z), log10_two_sided_p(z)),
+        let significance = (!self.penalised).then(|| self.significance(estimate / standard_error));
+        Uncertainty { standard_error, interval: [estimate - half, estimate + half], significance }
+    }
+
+    fn significance(self, z: f64) -> Significance {
+        match self.freedom {
+            None => Significance { z, p: two_sided_p(z), log10_p: log10_two_sided_p(z) },
             Some(freedom) => {
                 let p = student::two_sided_p(z, freedom);
-                (p, p.log10())
+                Significance { z, p, log10_p: p.log10() }
             }
-        };
-        Uncertainty { standard_error, z, p, log10_p, interval: [estimate - half, estimate + half] }
+        }
     }
 }

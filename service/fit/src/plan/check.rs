@@ -11,8 +11,8 @@ use super::document::{
 };
 use super::error::{Objection, Step};
 use super::{
-    DataPlan, FieldPlan, FitPlan, FormPlan, HoldoutPlan, LevelsPlan, MissingLevelPlan, MissingNumberPlan,
-    NumberPlan, OutcomePlan, Plan, RarePlan, RidgePlan,
+    BiasReductionPlan, DataPlan, FieldPlan, FitPlan, FormPlan, HoldoutPlan, LevelsPlan, MissingLevelPlan,
+    MissingNumberPlan, NumberPlan, OutcomePlan, Plan, RarePlan, RidgePlan,
 };
 
 type Checked<'a, T> = Result<T, Objection<'a>>;
@@ -364,7 +364,19 @@ fn fit<'a>(document: &FitDocument, data: &DataPlan) -> Checked<'a, FitPlan> {
         }
         Some(kind) => kind,
     };
-    Ok(FitPlan { ridge, standard_errors })
+    let bias_reduction = document.bias_reduction.unwrap_or_default();
+    if bias_reduction != BiasReductionPlan::Never {
+        let reason = match standard_errors {
+            _ if penalised => "bias reduction and a ridge penalty exclude each other",
+            _ if weighted => "bias reduction is not defined with sampling weights",
+            StandardErrors::Model => return Ok(FitPlan { ridge, bias_reduction, standard_errors }),
+            StandardErrors::Robust | StandardErrors::Cluster => {
+                "a bias-reduced fit has standard errors of kind `model` only"
+            }
+        };
+        return Err(Objection::new(at("bias_reduction"), reason));
+    }
+    Ok(FitPlan { ridge, bias_reduction, standard_errors })
 }
 
 fn monitor(document: &PlanDocument) -> Checked<'_, Monitor> {

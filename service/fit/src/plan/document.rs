@@ -9,6 +9,8 @@ use serde::{Deserialize, Serialize};
 
 use kilter_model::StandardErrors;
 
+use super::BiasReductionPlan;
+
 /// A plan: what to fit, from which tables, and how.
 #[derive(Debug, Clone, Deserialize, JsonSchema)]
 #[serde(deny_unknown_fields)]
@@ -226,6 +228,9 @@ pub(super) struct InteractionDocument {
 pub(super) struct FitDocument {
     /// Ridge penalty, or `cross-validate`; 0, maximum likelihood, if left out.
     pub ridge: Option<RidgeDocument>,
+    /// Whether to reduce the bias of the estimate (Firth 1993), which also makes one where the
+    /// data separate the categories: `never`, `if-separated` or `always`; `never` if left out.
+    pub bias_reduction: Option<BiasReductionPlan>,
     /// `model`, `robust` or `cluster`; `robust` if left out and the plan has sampling weights,
     /// else `model`.
     pub standard_errors: Option<StandardErrors>,

@@ -191,8 +191,23 @@ pub enum MissingLevelPlan {
 pub struct FitPlan {
     /// The penalty.
     pub ridge: RidgePlan,
+    /// When the bias of the estimate is reduced.
+    pub bias_reduction: BiasReductionPlan,
     /// Which standard errors the model file gets.
     pub standard_errors: StandardErrors,
+}
+
+/// When the bias of the estimate is reduced (Firth 1993).
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default, serde::Deserialize, schemars::JsonSchema)]
+#[serde(rename_all = "kebab-case")]
+pub enum BiasReductionPlan {
+    /// Never: the fit is one of maximum likelihood, or there is none.
+    #[default]
+    Never,
+    /// Where the data separate the categories, so that there is no maximum likelihood estimate.
+    IfSeparated,
+    /// Always.
+    Always,
 }
 
 /// The ridge penalty.

@@ -69,7 +69,11 @@ fn every_key_is_understood() {
     assert_eq!(plan.monitor.maturity_days, Some(5.0));
     assert_eq!(
         plan.fit,
-        FitPlan { ridge: RidgePlan::Penalty(0.0), standard_errors: StandardErrors::Cluster }
+        FitPlan {
+            ridge: RidgePlan::Penalty(0.0),
+            bias_reduction: BiasReductionPlan::Never,
+            standard_errors: StandardErrors::Cluster
+        }
     );
     assert_eq!(plan.interactions, [["rain_mm".to_owned(), "dwelling".to_owned()]]);
     let [

@@ -3,8 +3,10 @@
 
 #![expect(clippy::unwrap_used, reason = "in tests, helpers included, a missing value is a failure")]
 
+mod bias_reduction;
 mod invariants;
 mod reference;
+mod ridge;
 mod rows;
 mod separation;
 mod support;

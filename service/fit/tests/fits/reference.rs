@@ -74,8 +74,8 @@ fn check_estimates(fit: &str, found: &[Estimate], expected: &Value) {
             assert_close(&format!("{what} {part}"), found, wanted, 0.0, tolerance);
         };
         close("standard error", uncertainty.standard_error, number(&expected["std_error"]), STANDARD_ERROR);
-        close("z", uncertainty.z, number(&expected["z"]), STATISTIC);
-        close("p", uncertainty.p, number(&expected["p"]), P_VALUE);
+        close("z", uncertainty.significance.unwrap().z, number(&expected["z"]), STATISTIC);
+        close("p", uncertainty.significance.unwrap().p, number(&expected["p"]), P_VALUE);
         for end in 0..2 {
             close("interval", uncertainty.interval[end], number(&expected["ci95"][end]), STATISTIC);
             if let Some(ratios) = found.ratio_interval() {

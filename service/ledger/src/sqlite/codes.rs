@@ -1,13 +1,16 @@
 //! How things are written into columns.
 
+use kilter_drift::Summary;
+
 use crate::error::LedgerError;
 use crate::types::Stream;
 
-/// A 64-bit hash of an id (FNV-1a with a final mix), stable for ever: it is stored.
-pub(crate) fn id_hash(id: &str) -> i64 {
-    let hash = id.bytes().fold(0xCBF2_9CE4_8422_2325, |hash: u64, byte| {
-        (hash ^ u64::from(byte)).wrapping_mul(0x0100_0000_01B3)
-    });
+/// A 64-bit hash of the id of a record of a model (FNV-1a with a final mix), stable for ever: it
+/// is stored.
+pub(crate) fn id_hash(model: i64, id: &str) -> i64 {
+    let start = 0xCBF2_9CE4_8422_2325 ^ model.cast_unsigned().wrapping_mul(0x9E37_79B9_7F4A_7C15);
+    let hash =
+        id.bytes().fold(start, |hash: u64, byte| (hash ^ u64::from(byte)).wrapping_mul(0x0100_0000_01B3));
     let mixed = (hash ^ (hash >> 32)).wrapping_mul(0x9E37_79B9_7F4A_7C15);
     (mixed ^ (mixed >> 29)).cast_signed()
 }
@@ -22,6 +25,25 @@ pub(crate) fn floats_from_bytes(bytes: &[u8]) -> Result<Vec<f64>, LedgerError> {
         return Err(LedgerError::damaged("numbers", format!("{} bytes are no 64-bit numbers", bytes.len())));
     }
     Ok(chunks.iter().map(|chunk| f64::from_le_bytes(*chunk)).collect())
+}
+
+pub(crate) fn segments_to_text(segments: &[String]) -> Result<String, LedgerError> {
+    serde_json::to_string(segments).map_err(|error| LedgerError::damaged("segments", error))
+}
+
+pub(crate) fn segments_from_text(text: &str) -> Result<Vec<String>, LedgerError> {
+    serde_json::from_str(text).map_err(|error| LedgerError::damaged("segments", error))
+}
+
+/// MessagePack with the names of the parts: a number takes nine bytes and is not rounded, reading
+/// needs no parsing of digits, and parts that a later version adds can be told from those of an
+/// earlier one.
+pub(crate) fn summary_to_bytes(summary: &Summary) -> Result<Vec<u8>, LedgerError> {
+    rmp_serde::to_vec_named(summary).map_err(|error| LedgerError::damaged("a summary", error))
+}
+
+pub(crate) fn summary_from_bytes(bytes: &[u8]) -> Result<Summary, LedgerError> {
+    rmp_serde::from_slice(bytes).map_err(|error| LedgerError::damaged("a summary", error))
 }
 
 /// Field and value of a stream; both empty for all records.
@@ -48,14 +70,19 @@ mod tests {
         assert!(floats_from_bytes(&[1, 2, 3]).is_err());
     }
 
-    /// Stored hashes must never change.
+    /// Stored hashes must never change. These were computed once with an independent
+    /// implementation in Python.
     #[test]
     fn hashes_are_stable() {
-        assert_eq!(id_hash(""), id_hash(""));
-        assert_ne!(id_hash("S-1"), id_hash("S-2"));
-        assert_eq!(id_hash("S-1041"), HASH_OF_S_1041);
+        for (model, id, want) in HASHES {
+            assert_eq!(id_hash(model, id), want, "{model} {id}");
+        }
     }
 
-    /// Computed once with an independent implementation in Python.
-    const HASH_OF_S_1041: i64 = 8_664_225_008_637_256_268;
+    const HASHES: [(i64, &str, i64); 4] = [
+        (0, "", -8_831_310_031_781_878_669),
+        (1, "S-1041", -5_993_155_617_468_855_689),
+        (2, "S-1041", -3_882_882_939_282_053_773),
+        (1, "Zürich-7", 7_668_730_342_815_857_687),
+    ];
 }

@@ -13,62 +13,124 @@ CREATE TABLE version (
     UNIQUE (model, fingerprint)
 ) STRICT;
 
--- Who published what, when.
+-- Who did what, when and why.
 CREATE TABLE audit (
     number INTEGER PRIMARY KEY,
     at INTEGER NOT NULL,
     who TEXT NOT NULL,
+    why TEXT NOT NULL,
     what TEXT NOT NULL,
     model INTEGER NOT NULL REFERENCES model,
     from_version INTEGER REFERENCES version,
     to_version INTEGER REFERENCES version
 ) STRICT;
 
--- In order of arrival. Numbers are 64-bit floats, little-endian, one after another.
+CREATE TABLE category (
+    number INTEGER PRIMARY KEY,
+    model INTEGER NOT NULL REFERENCES model,
+    name TEXT NOT NULL,
+    UNIQUE (model, name)
+) STRICT;
+
+-- In order of arrival. Numbers are 64-bit floats, little-endian, one after another; segments are a
+-- JSON array of texts; times are microseconds since 1970, days are counted from 1970-01-01.
 CREATE TABLE record (
     number INTEGER PRIMARY KEY,
     model INTEGER NOT NULL,
     version INTEGER NOT NULL,
-    id_hash INTEGER NOT NULL,
-    id TEXT NOT NULL,
+    day INTEGER NOT NULL,
     time INTEGER NOT NULL,
     received INTEGER NOT NULL,
+    id TEXT NOT NULL,
     log_odds BLOB NOT NULL,
     inputs BLOB NOT NULL,
     segments TEXT NOT NULL
 ) STRICT;
-CREATE INDEX record_by_id ON record (id_hash);
+CREATE INDEX record_by_day ON record (model, day);
 
+-- What shadow versions made of a record.
+CREATE TABLE shadow_score (
+    record INTEGER NOT NULL,
+    version INTEGER NOT NULL,
+    log_odds BLOB NOT NULL,
+    inputs BLOB NOT NULL,
+    segments TEXT NOT NULL,
+    PRIMARY KEY (record, version)
+) STRICT, WITHOUT ROWID;
+
+-- In order of arrival. One that waits for its record has the id; one that is matched has the
+-- number and the day of the record instead.
 CREATE TABLE outcome (
     number INTEGER PRIMARY KEY,
     model INTEGER NOT NULL,
     id_hash INTEGER NOT NULL,
-    id TEXT NOT NULL,
-    category TEXT NOT NULL,
+    category INTEGER NOT NULL REFERENCES category,
     observed_at INTEGER NOT NULL,
-    received INTEGER NOT NULL
+    received INTEGER NOT NULL,
+    record INTEGER,
+    day INTEGER,
+    id TEXT
 ) STRICT;
-CREATE INDEX outcome_by_id ON outcome (id_hash);
+CREATE INDEX outcome_by_day ON outcome (model, day) WHERE record IS NOT NULL;
+CREATE INDEX outcome_waiting ON outcome (model, received) WHERE record IS NULL;
 
 -- What an outcome was before it was corrected.
 CREATE TABLE former_outcome (
     number INTEGER PRIMARY KEY,
     outcome INTEGER NOT NULL REFERENCES outcome,
-    category TEXT NOT NULL,
+    category INTEGER NOT NULL REFERENCES category,
     observed_at INTEGER NOT NULL,
     received INTEGER NOT NULL
 ) STRICT;
+CREATE INDEX former_outcome_by_outcome ON former_outcome (outcome);
 
--- A day of record time of one version; field and value are empty for all of its records.
-CREATE TABLE summary (
-    version INTEGER NOT NULL,
-    day INTEGER NOT NULL,
+-- Hashes of ids and the numbers of the records (kind 0) or outcomes (kind 1) with these ids, in
+-- sorted runs that are written once. What is younger than the last run is read from the tables.
+CREATE TABLE run (
+    number INTEGER PRIMARY KEY,
+    kind INTEGER NOT NULL,
+    last INTEGER NOT NULL,
+    filter BLOB NOT NULL
+) STRICT;
+CREATE TABLE run_entry (
+    run INTEGER NOT NULL,
+    id_hash INTEGER NOT NULL,
+    number INTEGER NOT NULL,
+    PRIMARY KEY (run, id_hash, number)
+) STRICT, WITHOUT ROWID;
+
+-- All records of a version (field and value empty), or those of one segment.
+CREATE TABLE stream (
+    number INTEGER PRIMARY KEY,
+    version INTEGER NOT NULL REFERENCES version,
     field TEXT NOT NULL,
     value TEXT NOT NULL,
-    scored REAL NOT NULL,
-    outcomes REAL NOT NULL,
-    summary TEXT NOT NULL,
-    PRIMARY KEY (version, day, field, value)
+    UNIQUE (version, field, value)
+) STRICT;
+
+-- A day of record time of one stream, as MessagePack.
+CREATE TABLE summary (
+    number INTEGER PRIMARY KEY,
+    stream INTEGER NOT NULL REFERENCES stream,
+    day INTEGER NOT NULL,
+    summary BLOB NOT NULL,
+    UNIQUE (stream, day)
+) STRICT;
+
+-- Records and matched outcomes of each day, pruned ones included.
+CREATE TABLE day (
+    model INTEGER NOT NULL,
+    day INTEGER NOT NULL,
+    records INTEGER NOT NULL,
+    matched INTEGER NOT NULL,
+    PRIMARY KEY (model, day)
+) STRICT, WITHOUT ROWID;
+
+-- The first day whose raw records are kept, and the next numbers of records and outcomes where
+-- the last ones were removed.
+CREATE TABLE mark (
+    name TEXT PRIMARY KEY,
+    value INTEGER NOT NULL
 ) STRICT, WITHOUT ROWID;
 
 CREATE TABLE file (

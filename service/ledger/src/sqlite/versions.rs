@@ -1,0 +1,160 @@
+//! Versions: published, promoted, rolled back, retired; each with a line in the audit trail.
+
+use kilter_model::ModelFile;
+use rusqlite::{OptionalExtension, params};
+
+use super::names::live_number;
+use super::writing::Writing;
+use crate::error::LedgerError;
+use crate::fold::FoldedVersion;
+use crate::types::{Act, VersionChange, VersionRow, VersionState};
+
+/// What the audit trail says of acts that make a version live.
+const PUBLISHED_LIVE: &str = "publish as live";
+const PROMOTED: &str = "promote";
+
+/// A line of the audit trail before it is written.
+struct Line<'a> {
+    model: i64,
+    what: &'a str,
+    from: Option<i64>,
+    to: Option<i64>,
+}
+
+impl Writing<'_> {
+    pub(super) fn publish(&mut self, version: &VersionRow, who: &str) -> Result<(), LedgerError> {
+        check_file(version)?;
+        let model = self.model(&version.model)?;
+        let from = live_number(self.transaction, model)?;
+        if version.state == VersionState::Live {
+            self.retire_live(model)?;
+        } else if self.is_of(from, &version.fingerprint)? {
+            return Err(LedgerError::LiveVersion {
+                model: version.model.clone(),
+                version: version.fingerprint.clone(),
+            });
+        }
+        self.transaction.execute(
+            "INSERT INTO version (model, fingerprint, file, state, published_at) VALUES (?, ?, ?, ?, ?) \
+             ON CONFLICT (model, fingerprint) DO UPDATE SET state = excluded.state",
+            params![model, version.fingerprint, version.file, version.state.name(), version.published_at],
+        )?;
+        self.cache.names.forget_live();
+        let to = self.version_of((model, &version.model), &version.fingerprint)?.number;
+        let what = match version.state {
+            VersionState::Live => PUBLISHED_LIVE,
+            VersionState::Shadow => "publish as shadow",
+            VersionState::Retired => "publish as retired",
+        };
+        let act = Act { at: version.published_at, who: who.to_owned(), why: String::new() };
+        self.write_line(&act, &Line { model, what, from, to: Some(to) })
+    }
+
+    pub(super) fn change_version(
+        &mut self,
+        model_name: &str,
+        change: &VersionChange,
+        act: &Act,
+    ) -> Result<VersionRow, LedgerError> {
+        let model = self.model(model_name)?;
+        let from = live_number(self.transaction, model)?;
+        let (what, to, state) = match change {
+            VersionChange::Promote(fingerprint) => {
+                let to = self.version_of((model, model_name), fingerprint)?.number;
+                (PROMOTED, to, VersionState::Live)
+            }
+            VersionChange::Rollback => ("roll back", self.former_live(model_name, from)?, VersionState::Live),
+            VersionChange::Retire(fingerprint) => {
+                let to = self.version_of((model, model_name), fingerprint)?.number;
+                if Some(to) == from {
+                    return Err(LedgerError::LiveVersion {
+                        model: model_name.to_owned(),
+                        version: fingerprint.clone(),
+                    });
+                }
+                ("retire", to, VersionState::Retired)
+            }
+        };
+        if state == VersionState::Live {
+            self.retire_live(model)?;
+        }
+        self.transaction
+            .execute("UPDATE version SET state = ? WHERE number = ?", params![state.name(), to])?;
+        self.cache.names.forget_live();
+        self.write_line(act, &Line { model, what, from, to: Some(to) })?;
+        self.version_row(model_name, to, state)
+    }
+
+    pub(super) fn write_deletion(
+        &mut self,
+        model: i64,
+        act: &Act,
+        deleted: usize,
+    ) -> Result<(), LedgerError> {
+        let what = format!("delete {deleted} records");
+        self.write_line(act, &Line { model, what: &what, from: None, to: None })
+    }
+
+    fn write_line(&self, act: &Act, line: &Line) -> Result<(), LedgerError> {
+        self.transaction.execute(
+            "INSERT INTO audit (at, who, why, what, model, from_version, to_version) VALUES (?, ?, ?, ?, ?, ?, ?)",
+            params![act.at, act.who, act.why, line.what, line.model, line.from, line.to],
+        )?;
+        Ok(())
+    }
+
+    /// Whether a version has a fingerprint.
+    fn is_of(&self, version: Option<i64>, fingerprint: &str) -> Result<bool, LedgerError> {
+        Ok(self.transaction.query_row(
+            "SELECT EXISTS (SELECT 1 FROM version WHERE number = ? AND fingerprint = ?)",
+            params![version, fingerprint],
+            |row| row.get(0),
+        )?)
+    }
+
+    fn retire_live(&self, model: i64) -> Result<(), LedgerError> {
+        self.transaction
+            .execute("UPDATE version SET state = 'retired' WHERE model = ? AND state = 'live'", [model])?;
+        Ok(())
+    }
+
+    /// The version that was live before the live version became so. Going back is not counted, so
+    /// going back twice goes back two versions and not to and fro.
+    fn former_live(&self, model: &str, live: Option<i64>) -> Result<i64, LedgerError> {
+        self.transaction
+            .query_row(
+                "SELECT from_version FROM audit WHERE to_version = ?1 AND from_version <> ?1 \
+                 AND what IN (?2, ?3) ORDER BY number DESC LIMIT 1",
+                params![live, PUBLISHED_LIVE, PROMOTED],
+                |row| row.get(0),
+            )
+            .optional()?
+            .ok_or_else(|| LedgerError::NoFormerVersion { model: model.to_owned() })
+    }
+
+    fn version_row(&self, model: &str, number: i64, state: VersionState) -> Result<VersionRow, LedgerError> {
+        Ok(self.transaction.query_row(
+            "SELECT fingerprint, file, published_at FROM version WHERE number = ?",
+            [number],
+            |row| {
+                Ok(VersionRow {
+                    model: model.to_owned(),
+                    fingerprint: row.get(0)?,
+                    file: row.get(1)?,
+                    state,
+                    published_at: row.get(2)?,
+                })
+            },
+        )?)
+    }
+}
+
+/// Refuses a file that the ledger could not fold by, or that is not what it is called.
+fn check_file(version: &VersionRow) -> Result<(), LedgerError> {
+    let refused = |reason: String| LedgerError::ModelFile { model: version.model.clone(), reason };
+    let model = ModelFile::from_json(&version.file).map_err(|error| refused(error.to_string()))?;
+    if model.name != version.model || model.fingerprint != version.fingerprint {
+        return Err(refused(format!("the file is of `{}` {}", model.name, model.fingerprint)));
+    }
+    FoldedVersion::of_model(0, model).map(|_| ()).map_err(|error| refused(error.to_string()))
+}
