@@ -24,6 +24,9 @@ use crate::registry::Registry;
 
 /// Stands between a worker's mark and the name of a claimed file.
 const CLAIM_MARK: char = '~';
+/// How often a file is taken up again after its worker died. A file that brings workers down must
+/// not do so for ever.
+const MOST_ATTEMPTS: u32 = 3;
 /// A file that was written to more recently is not complete yet.
 const SETTLED: Duration = Duration::from_secs(2);
 
@@ -176,7 +179,15 @@ impl DropFolder {
         if !claimed.exists() {
             return Ok(());
         }
-        let receipt = file::process(self, claimed, registry, metrics, clock)?;
+        let claim = Claim::of(claimed);
+        let receipt = if claim.attempts < MOST_ATTEMPTS {
+            let again = claimed.with_file_name(Claim { attempts: claim.attempts + 1, ..claim }.file_name());
+            fs::rename(claimed, &again)
+                .with_context(|| format!("could not take up `{}`", claimed.display()))?;
+            file::process(self, &again, registry, metrics, clock)?
+        } else {
+            file::set_aside(self, claimed, registry, metrics, clock)?
+        };
         swept.files += 1;
         swept.not_scored += usize::from(receipt.state != file::FileState::Scored);
         swept.scored_rows += receipt.scored;
@@ -184,11 +195,26 @@ impl DropFolder {
         metrics.drop_files.with_label_values(&[self.model.as_str(), receipt.state.name()]).inc();
         Ok(())
     }
+}
 
-    /// The name that a file came under.
-    fn original_name(claimed: &Path) -> String {
+/// The name of a claimed file: the worker's mark, how often it was taken up, the name it came under.
+#[derive(Debug, Clone, PartialEq, Eq)]
+struct Claim {
+    mark: String,
+    attempts: u32,
+    original: String,
+}
+
+impl Claim {
+    fn of(claimed: &Path) -> Self {
         let name = claimed.file_name().unwrap_or_default().to_string_lossy().into_owned();
-        name.split_once(CLAIM_MARK).map_or(name.clone(), |(_, original)| original.to_owned())
+        let (head, original) = name.split_once(CLAIM_MARK).unwrap_or(("", name.as_str()));
+        let (mark, attempts) = head.split_once('.').unwrap_or((head, "0"));
+        Self { mark: mark.to_owned(), attempts: attempts.parse().unwrap_or(0), original: original.to_owned() }
+    }
+
+    fn file_name(&self) -> String {
+        format!("{}.{}{CLAIM_MARK}{}", self.mark, self.attempts, self.original)
     }
 }
 

@@ -157,3 +157,21 @@ fn a_file_left_in_working_is_finished() {
     assert_eq!(files(folder, "scored"), ["more.csv"]);
     assert_eq!(scored_records(folder), 4.0, "three records came twice and count once");
 }
+
+/// A file that brings its workers down is not taken up for ever.
+#[test]
+fn a_file_that_was_begun_too_often_is_set_aside() {
+    let folder = tempfile::tempdir().expect("a folder");
+    let folder = folder.path();
+    published(folder);
+    write(&folder.join("drop/working/0190aaaa.3~again.csv"), &format!("{HEAD}{ROWS}"));
+    write(&folder.join("drop/working/0190bbbb.2~once-more.csv"), &format!("{HEAD}z,2026-03-02,low,33,\n"));
+    assert_eq!(kilter(folder, &["sweep"]).code, 1);
+    let receipt = receipt(folder, "again.csv.json");
+    assert_eq!(receipt["state"], "refused");
+    assert!(receipt["reason"].as_str().unwrap_or_default().contains("never ended"), "{receipt}");
+    assert_eq!(
+        (files(folder, "refused"), files(folder, "scored")),
+        (vec!["again.csv".to_owned()], vec!["once-more.csv".to_owned()])
+    );
+}

@@ -10,8 +10,8 @@ use kilter_model::cells::format_time;
 use kilter_tables::{Format, ReadOptions, TableBatch, TableError, TableReader, TableWriter};
 use serde::Serialize;
 
-use super::DropFolder;
 use super::hash::sha256_of;
+use super::{Claim, DropFolder, MOST_ATTEMPTS};
 use crate::clock::Clock;
 use crate::durable::{sync_folder, write_durably};
 use crate::metrics::Metrics;
@@ -98,27 +98,49 @@ pub(super) fn process(
     clock: Clock,
 ) -> anyhow::Result<Receipt> {
     let started = clock.now();
-    let sha256 = sha256_of(claimed).with_context(|| format!("could not read `{}`", claimed.display()))?;
-    let receipt = Receipt {
-        file: DropFolder::original_name(claimed),
-        sha256,
-        state: FileState::Scored,
-        model: folder.model.clone(),
-        version: None,
-        result: None,
-        rows: 0,
-        scored: 0,
-        repeated: 0,
-        refused: 0,
-        reason: None,
-        repeats: None,
-        started: format_time(started),
-        finished: String::new(),
-    };
-    Work { folder, claimed, registry, metrics, clock, receipt }.run(started)
+    Work::new(folder, claimed, registry, metrics, clock)?.run(started)
 }
 
-impl Work<'_> {
+/// Sets a file aside that brought its workers down.
+pub(super) fn set_aside(
+    folder: &DropFolder,
+    claimed: &Path,
+    registry: &Registry,
+    metrics: &Metrics,
+    clock: Clock,
+) -> anyhow::Result<Receipt> {
+    let reason = format!("work on it was begun {MOST_ATTEMPTS} times and never ended; it may be damaged");
+    Work::new(folder, claimed, registry, metrics, clock)?.set_aside(reason)
+}
+
+impl<'a> Work<'a> {
+    fn new(
+        folder: &'a DropFolder,
+        claimed: &'a Path,
+        registry: &'a Registry,
+        metrics: &'a Metrics,
+        clock: Clock,
+    ) -> anyhow::Result<Self> {
+        let sha256 = sha256_of(claimed).with_context(|| format!("could not read `{}`", claimed.display()))?;
+        let receipt = Receipt {
+            file: Claim::of(claimed).original,
+            sha256,
+            state: FileState::Scored,
+            model: folder.model.clone(),
+            version: None,
+            result: None,
+            rows: 0,
+            scored: 0,
+            repeated: 0,
+            refused: 0,
+            reason: None,
+            repeats: None,
+            started: format_time(clock.now()),
+            finished: String::new(),
+        };
+        Ok(Self { folder, claimed, registry, metrics, clock, receipt })
+    }
+
     fn run(mut self, started: i64) -> anyhow::Result<Receipt> {
         let Some(version) = self.registry.live(&self.folder.model) else {
             let reason = format!("no model named `{}` is published", self.folder.model);
@@ -132,7 +154,7 @@ impl Work<'_> {
                 return self.set_aside(reason);
             }
         };
-        let claim = self.claimed.file_name().unwrap_or_default().to_string_lossy().into_owned();
+        let claim = Claim::of(self.claimed).mark;
         let start = FileStart {
             model: self.folder.model.clone(),
             sha256: self.receipt.sha256.clone(),
@@ -143,7 +165,7 @@ impl Work<'_> {
         };
         let mut result = start.result.clone();
         if let Reply::File(Some(known)) = self.registry.ledger().write(Job::BeginFile(start))? {
-            if known.claim != claim && (known.finished.is_some() || self.is_claimed(&known.claim)) {
+            if known.claim != claim && (known.finished.is_some() || self.is_claimed(&known.claim)?) {
                 self.receipt.repeats = Some(known.name);
                 return self.set_repeated_aside();
             }
@@ -183,8 +205,9 @@ impl Work<'_> {
         error.to_string().replace(&*self.claimed.to_string_lossy(), &self.receipt.file)
     }
 
-    fn is_claimed(&self, claim: &str) -> bool {
-        self.folder.sub("working").join(claim).exists()
+    /// Whether a worker's mark is on a file that is still being worked on.
+    fn is_claimed(&self, mark: &str) -> anyhow::Result<bool> {
+        Ok(self.folder.files("working")?.iter().any(|path| Claim::of(path).mark == mark))
     }
 
     /// A name for the results that none in the folder has yet: the file's own, or with a number.

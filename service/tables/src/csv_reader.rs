@@ -7,7 +7,7 @@ use std::path::{Path, PathBuf};
 use csv::{ByteRecord, StringRecord};
 
 use crate::error::TableError;
-use crate::reader::{ReadOptions, Source, places};
+use crate::reader::{ReadOptions, Source, deliver_all, places};
 use crate::rows::{Rows, TableBatch, TextCells};
 
 /// Separators that are looked for in the head, the likeliest first.
@@ -98,14 +98,7 @@ impl Source for CsvSource {
     }
 
     fn run(mut self: Box<Self>, deliver: &mut dyn FnMut(Result<TableBatch, TableError>) -> bool) {
-        let mut first_row = 0;
-        while let Some(batch) = self.batch(first_row).transpose() {
-            let failed = batch.is_err();
-            first_row += batch.as_ref().map_or(0, |batch| batch.batch.rows as u64);
-            if !deliver(batch) || failed {
-                return;
-            }
-        }
+        deliver_all(|first_row| self.batch(first_row), deliver);
     }
 }
 

@@ -7,7 +7,7 @@ use kilter_model::RecordReader;
 use serde_json::{Map, Value};
 
 use crate::error::TableError;
-use crate::reader::{ReadOptions, Source};
+use crate::reader::{ReadOptions, Source, deliver_all};
 use crate::rows::{Rows, TableBatch};
 
 /// An NDJSON file being read.
@@ -104,13 +104,6 @@ impl Source for NdjsonSource {
     }
 
     fn run(mut self: Box<Self>, deliver: &mut dyn FnMut(Result<TableBatch, TableError>) -> bool) {
-        let mut first_row = 0;
-        while let Some(batch) = self.batch(first_row).transpose() {
-            let failed = batch.is_err();
-            first_row += batch.as_ref().map_or(0, |batch| batch.batch.rows as u64);
-            if !deliver(batch) || failed {
-                return;
-            }
-        }
+        deliver_all(|first_row| self.batch(first_row), deliver);
     }
 }

@@ -41,6 +41,22 @@ pub(crate) trait Source: Send {
     fn run(self: Box<Self>, deliver: &mut dyn FnMut(Result<TableBatch, TableError>) -> bool);
 }
 
+/// Delivers batch after batch until there are no more, one fails, or nobody wants more. `batch`
+/// reads the batch that begins with a row.
+pub(crate) fn deliver_all(
+    mut batch: impl FnMut(u64) -> Result<Option<TableBatch>, TableError>,
+    deliver: &mut dyn FnMut(Result<TableBatch, TableError>) -> bool,
+) {
+    let mut first_row = 0;
+    while let Some(read) = batch(first_row).transpose() {
+        let failed = read.is_err();
+        first_row += read.as_ref().map_or(0, |read| read.batch.rows as u64);
+        if !deliver(read) || failed {
+            return;
+        }
+    }
+}
+
 /// A table being read: an iterator over its batches.
 #[derive(Debug)]
 pub struct TableReader {
