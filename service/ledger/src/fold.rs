@@ -1,8 +1,8 @@
 //! Folding records and outcomes into window summaries. The same code serves the writer, which
 //! folds as things come, and the verification, which folds everything anew.
 
+use std::collections::HashMap;
 use std::collections::hash_map::Entry;
-use std::collections::{HashMap, HashSet};
 use std::sync::Arc;
 
 use kilter_drift::{Detail, DriftError, Frame, ScoredRecord, Summary};
@@ -218,11 +218,18 @@ impl Streams {
 /// Stream and day of a summary.
 pub(crate) type WindowKey = (i64, i64);
 
+/// A summary at hand.
+#[derive(Debug)]
+struct Window {
+    summary: Summary,
+    changed: bool,
+}
+
 /// Summaries at hand, those that were changed marked.
 #[derive(Debug, Default)]
 pub(crate) struct Windows {
-    summaries: HashMap<WindowKey, Summary>,
-    changed: HashSet<WindowKey>,
+    windows: HashMap<WindowKey, Window>,
+    changed: Vec<WindowKey>,
 }
 
 impl Windows {
@@ -237,46 +244,54 @@ impl Windows {
         load: impl FnOnce(WindowKey) -> Result<Option<Summary>, LedgerError>,
     ) -> Result<(), LedgerError> {
         let key = (stream, case.day());
-        let summary = match self.summaries.entry(key) {
+        let window = match self.windows.entry(key) {
             Entry::Occupied(entry) => entry.into_mut(),
             Entry::Vacant(entry) => {
-                entry.insert(load(key)?.unwrap_or_else(|| Summary::new(&version.frame, detail)))
+                let summary = load(key)?.unwrap_or_else(|| Summary::new(&version.frame, detail));
+                entry.insert(Window { summary, changed: false })
             }
         };
-        self.changed.insert(key);
-        apply(summary, &version.frame, case, terms, event)
+        if !window.changed {
+            window.changed = true;
+            self.changed.push(key);
+        }
+        apply(&mut window.summary, &version.frame, case, terms, event)
             .map_err(|source| LedgerError::Summary { id: case.id.to_owned(), source: Arc::new(source) })
     }
 
     /// The changed summaries, in the order of their keys.
-    pub(crate) fn changed(&self) -> impl Iterator<Item = (WindowKey, &Summary)> {
-        let mut keys: Vec<WindowKey> = self.changed.iter().copied().collect();
-        keys.sort_unstable();
-        keys.into_iter().filter_map(|key| self.summaries.get(&key).map(|summary| (key, summary)))
+    pub(crate) fn changed(&mut self) -> impl Iterator<Item = (WindowKey, &Summary)> {
+        self.changed.sort_unstable();
+        let windows = &self.windows;
+        self.changed.iter().filter_map(|key| windows.get(key).map(|window| (*key, &window.summary)))
     }
 
     /// What was changed is on disk.
     pub(crate) fn committed(&mut self) {
-        self.changed.clear();
+        for key in self.changed.drain(..) {
+            if let Some(window) = self.windows.get_mut(&key) {
+                window.changed = false;
+            }
+        }
     }
 
     /// What was changed is forgotten.
     pub(crate) fn rolled_back(&mut self) {
-        for key in self.changed.drain() {
-            self.summaries.remove(&key);
+        for key in self.changed.drain(..) {
+            self.windows.remove(&key);
         }
     }
 
     pub(crate) fn remove(&mut self, key: WindowKey) -> Option<Summary> {
-        self.summaries.remove(&key)
+        self.windows.remove(&key).map(|window| window.summary)
     }
 
     pub(crate) fn keys(&self) -> impl Iterator<Item = WindowKey> {
-        self.summaries.keys().copied()
+        self.windows.keys().copied()
     }
 
     pub(crate) fn len(&self) -> usize {
-        self.summaries.len()
+        self.windows.len()
     }
 }
 

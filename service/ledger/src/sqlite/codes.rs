@@ -16,7 +16,11 @@ pub(crate) fn id_hash(model: i64, id: &str) -> i64 {
 }
 
 pub(crate) fn floats_to_bytes(values: &[f64]) -> Vec<u8> {
-    values.iter().flat_map(|value| value.to_le_bytes()).collect()
+    let mut bytes = Vec::with_capacity(8 * values.len());
+    for value in values {
+        bytes.extend_from_slice(&value.to_le_bytes());
+    }
+    bytes
 }
 
 pub(crate) fn floats_from_bytes(bytes: &[u8]) -> Result<Vec<f64>, LedgerError> {
@@ -25,6 +29,14 @@ pub(crate) fn floats_from_bytes(bytes: &[u8]) -> Result<Vec<f64>, LedgerError> {
         return Err(LedgerError::damaged("numbers", format!("{} bytes are no 64-bit numbers", bytes.len())));
     }
     Ok(chunks.iter().map(|chunk| f64::from_le_bytes(*chunk)).collect())
+}
+
+pub(crate) fn integers_to_bytes(values: &[i64]) -> Vec<u8> {
+    values.iter().flat_map(|value| value.to_le_bytes()).collect()
+}
+
+pub(crate) fn integers_from_bytes(bytes: &[u8]) -> Result<Vec<i64>, LedgerError> {
+    Ok(floats_from_bytes(bytes)?.into_iter().map(|value| value.to_bits().cast_signed()).collect())
 }
 
 pub(crate) fn segments_to_text(segments: &[String]) -> Result<String, LedgerError> {

@@ -12,7 +12,7 @@ use std::hash::{BuildHasherDefault, Hasher};
 
 use rusqlite::{Connection, Row, params};
 
-use super::codes::id_hash;
+use super::codes::{id_hash, integers_from_bytes, integers_to_bytes};
 use super::filter::Filter;
 use crate::error::LedgerError;
 
@@ -24,7 +24,7 @@ pub(crate) enum Kind {
 }
 
 impl Kind {
-    fn code(self) -> i64 {
+    pub(crate) fn code(self) -> i64 {
         match self {
             Self::Record => 0,
             Self::Outcome => 1,
@@ -73,11 +73,58 @@ impl Hasher for NoHasher {
     }
 }
 
+/// Entries of a block: as many as fit a page of the file.
+const ENTRIES_PER_BLOCK: usize = 500;
+/// A hash and a number, eight bytes each, little-endian.
+const BYTES_PER_ENTRY: usize = 16;
+
 /// A run of sorted hashes on disk.
 #[derive(Debug)]
 struct Run {
     number: i64,
+    first_block: i64,
+    /// First hash of each block.
+    fences: Vec<i64>,
     filter: Filter,
+}
+
+impl Run {
+    /// Adds the numbers with a hash to `found`.
+    fn search(&self, connection: &Connection, hash: i64, found: &mut Vec<i64>) -> Result<(), LedgerError> {
+        search_blocks(connection, self.first_block, &self.fences, hash, found)
+    }
+}
+
+/// Adds the numbers with a hash to `found`. Equal hashes may go on into further blocks.
+fn search_blocks(
+    connection: &Connection,
+    first_block: i64,
+    fences: &[i64],
+    hash: i64,
+    found: &mut Vec<i64>,
+) -> Result<(), LedgerError> {
+    let first = fences.partition_point(|fence| *fence < hash).saturating_sub(1);
+    let end = fences.partition_point(|fence| *fence <= hash);
+    let mut statement = connection.prepare_cached("SELECT entries FROM run_block WHERE number = ?")?;
+    for block in first..end {
+        let mut rows = statement.query([first_block + block as i64])?;
+        let Some(row) = rows.next()? else { continue };
+        let (entries, _) =
+            row.get_ref(0)?.as_blob().map_err(rusqlite::Error::from)?.as_chunks::<BYTES_PER_ENTRY>();
+        let from = entries.partition_point(|entry| first_half(entry) < hash);
+        found.extend(entries[from..].iter().take_while(|entry| first_half(entry) == hash).map(second_half));
+    }
+    Ok(())
+}
+
+fn first_half(entry: &[u8; BYTES_PER_ENTRY]) -> i64 {
+    let [a, b, c, d, e, f, g, h, ..] = *entry;
+    i64::from_le_bytes([a, b, c, d, e, f, g, h])
+}
+
+fn second_half(entry: &[u8; BYTES_PER_ENTRY]) -> i64 {
+    let [.., a, b, c, d, e, f, g, h] = *entry;
+    i64::from_le_bytes([a, b, c, d, e, f, g, h])
 }
 
 /// Finds the numbers of rows by the hashes of their ids.
@@ -148,12 +195,7 @@ impl IdIndex {
             found.extend(self.twins.iter().filter(|twin| twin.0 == hash).map(|twin| twin.1));
         }
         for run in self.runs.iter().rev().filter(|run| run.filter.may_hold(hash)) {
-            let mut statement =
-                connection.prepare_cached("SELECT number FROM run_entry WHERE run = ? AND id_hash = ?")?;
-            let mut rows = statement.query([run.number, hash])?;
-            while let Some(row) = rows.next()? {
-                found.push(row.get(0)?);
-            }
+            run.search(connection, hash, &mut found)?;
         }
         Ok(found)
     }
@@ -189,16 +231,33 @@ impl IdIndex {
             .chain(self.twins.iter().copied())
             .collect();
         entries.sort_unstable();
+        let mut insert =
+            connection.prepare_cached("INSERT INTO run_block (number, entries) VALUES (?, ?)")?;
+        let first_block: i64 =
+            connection
+                .query_row("SELECT coalesce(max(number), 0) + 1 FROM run_block", [], |row| row.get(0))?;
+        let mut fences = Vec::with_capacity(entries.len().div_ceil(ENTRIES_PER_BLOCK));
+        for (block, number) in entries.chunks(ENTRIES_PER_BLOCK).zip(first_block..) {
+            fences.extend(block.first().map(|entry| entry.0));
+            let bytes: Vec<u8> = block
+                .iter()
+                .flat_map(|entry| [entry.0.to_le_bytes(), entry.1.to_le_bytes()])
+                .flatten()
+                .collect();
+            insert.execute(params![number, bytes])?;
+        }
         let filter = Filter::of(entries.iter().map(|entry| entry.0));
         connection
-            .prepare_cached("INSERT INTO run (kind, last, filter) VALUES (?, ?, ?)")?
-            .execute(params![self.kind.code(), self.next - 1, filter.to_bytes()])?;
-        let run = connection.last_insert_rowid();
-        let mut insert =
-            connection.prepare_cached("INSERT INTO run_entry (run, id_hash, number) VALUES (?, ?, ?)")?;
-        for (hash, number) in entries {
-            insert.execute([run, hash, number])?;
-        }
+            .prepare_cached(
+                "INSERT INTO run (kind, last, first_block, fences, filter) VALUES (?, ?, ?, ?, ?)",
+            )?
+            .execute(params![
+                self.kind.code(),
+                self.next - 1,
+                first_block,
+                integers_to_bytes(&fences),
+                filter.to_bytes()
+            ])?;
         Ok(())
     }
 
@@ -223,7 +282,7 @@ impl IdIndex {
             last = last.max(last_of_run);
             let run = match known.remove(&number) {
                 Some(run) => run,
-                None => Run { number, filter: load_filter(connection, number)? },
+                None => load_run(connection, number)?,
             };
             self.runs.push(run);
         }
@@ -231,11 +290,13 @@ impl IdIndex {
     }
 }
 
-fn load_filter(connection: &Connection, run: i64) -> Result<Filter, LedgerError> {
-    let bytes: Vec<u8> = connection
-        .prepare_cached("SELECT filter FROM run WHERE number = ?")?
-        .query_row([run], |row| row.get(0))?;
-    Filter::from_bytes(&bytes)
+fn load_run(connection: &Connection, number: i64) -> Result<Run, LedgerError> {
+    let mut statement =
+        connection.prepare_cached("SELECT first_block, fences, filter FROM run WHERE number = ?")?;
+    let (first_block, fences, filter): (i64, Vec<u8>, Vec<u8>) =
+        statement.query_row([number], |row| Ok((row.get(0)?, row.get(1)?, row.get(2)?)))?;
+    let fences = integers_from_bytes(&fences)?;
+    Ok(Run { number, first_block, fences, filter: Filter::from_bytes(&filter)? })
 }
 
 /// The same as [`IdIndex::candidates`] for a single question, with nothing in memory.
@@ -246,14 +307,15 @@ pub(crate) fn search(
     id: &str,
 ) -> Result<Vec<i64>, LedgerError> {
     let hash = id_hash(model, id);
-    let mut statement = connection.prepare_cached(
-        "SELECT number FROM run_entry WHERE run IN (SELECT number FROM run WHERE kind = ?) AND id_hash = ?",
-    )?;
-    let in_runs = statement.query_map([kind.code(), hash], |row| row.get(0))?;
-    let mut found = in_runs.collect::<Result<Vec<i64>, _>>()?;
-    let indexed: i64 = connection
-        .prepare_cached("SELECT coalesce(max(last), 0) FROM run WHERE kind = ?")?
-        .query_row([kind.code()], |row| row.get(0))?;
+    let (mut found, mut indexed) = (Vec::new(), 0);
+    let mut statement =
+        connection.prepare_cached("SELECT first_block, fences, last FROM run WHERE kind = ?")?;
+    let mut runs = statement.query([kind.code()])?;
+    while let Some(run) = runs.next()? {
+        let fences = integers_from_bytes(run.get_ref(1)?.as_blob().map_err(rusqlite::Error::from)?)?;
+        search_blocks(connection, run.get(0)?, &fences, hash, &mut found)?;
+        indexed = indexed.max(run.get(2)?);
+    }
     let mut statement = connection.prepare_cached(kind.rows_from())?;
     let mut rows = statement.query([indexed + 1])?;
     while let Some(row) = rows.next()? {
@@ -266,10 +328,15 @@ pub(crate) fn search(
 
 /// Removes the runs whose rows have all been removed.
 pub(crate) fn drop_runs_before(connection: &Connection, kind: Kind, first: i64) -> Result<(), LedgerError> {
-    connection.execute(
-        "DELETE FROM run_entry WHERE run IN (SELECT number FROM run WHERE kind = ? AND last < ?)",
-        [kind.code(), first],
-    )?;
-    connection.execute("DELETE FROM run WHERE kind = ? AND last < ?", [kind.code(), first])?;
+    let mut statement = connection
+        .prepare_cached("SELECT number, first_block, fences FROM run WHERE kind = ? AND last < ?")?;
+    let old = statement
+        .query_map([kind.code(), first], |row| Ok((row.get(0)?, row.get(1)?, row.get(2)?)))?
+        .collect::<Result<Vec<(i64, i64, Vec<u8>)>, _>>()?;
+    for (run, first_block, fences) in old {
+        let end = first_block + integers_from_bytes(&fences)?.len() as i64;
+        connection.execute("DELETE FROM run_block WHERE number >= ? AND number < ?", [first_block, end])?;
+        connection.execute("DELETE FROM run WHERE number = ?", [run])?;
+    }
     Ok(())
 }

@@ -5,16 +5,20 @@
 //! commits are noticed, and what is kept at hand here is brought up to date then.
 
 mod backup;
+mod checkpoints;
 mod codes;
 mod files;
 mod filter;
 mod index;
+mod keeping;
+mod matching;
 mod names;
 mod raw;
 mod reader;
 mod removal;
 mod rows;
 mod schema;
+mod spans;
 mod verify;
 mod versions;
 mod writing;
@@ -24,11 +28,13 @@ use std::path::{Path, PathBuf};
 use rusqlite::{Connection, TransactionBehavior};
 
 pub use self::backup::restore;
+use self::checkpoints::Checkpoints;
 #[cfg(test)]
 pub(crate) use self::codes::id_hash;
 use self::index::{IdIndex, Kind};
 use self::names::Names;
 use self::reader::SqliteReader;
+use self::spans::Spans;
 use self::writing::{Writing, horizon};
 use crate::error::LedgerError;
 use crate::fold::Windows;
@@ -39,7 +45,7 @@ const MOST_CACHED_WINDOWS: usize = 4096;
 
 /// Rows that are found by memory alone; when there are more, they are written as a run. It takes
 /// about 16 MB of memory for records and as much for outcomes, half a second to read again after a
-/// restart, and a third of a second to write.
+/// restart, and a twentieth of a second to write.
 const ROWS_PER_RUN: usize = 500_000;
 
 /// The store.
@@ -47,6 +53,7 @@ pub(crate) struct SqliteStore {
     path: PathBuf,
     connection: Connection,
     cache: Cache,
+    checkpoints: Checkpoints,
     rows_per_run: usize,
 }
 
@@ -56,6 +63,7 @@ struct Cache {
     names: Names,
     records: IdIndex,
     outcomes: IdIndex,
+    spans: Spans,
     /// First day whose raw records are kept.
     horizon: i64,
     /// SQLite's counter of commits by other connections; `None` before anything was read.
@@ -69,6 +77,7 @@ impl Cache {
             names: Names::default(),
             records: IdIndex::new(Kind::Record),
             outcomes: IdIndex::new(Kind::Outcome),
+            spans: Spans::default(),
             horizon: i64::MIN,
             commits_of_others: None,
         }
@@ -86,6 +95,7 @@ impl Cache {
         self.commits_of_others = None;
         self.windows = Windows::default();
         self.names = Names::default();
+        self.spans = Spans::default();
         self.records.catch_up(connection)?;
         self.outcomes.catch_up(connection)?;
         self.horizon = horizon(connection)?;
@@ -105,6 +115,7 @@ impl Cache {
         self.outcomes.rolled_back();
         // Numbers of names may have been given that are free again, and the horizon may have moved.
         self.names = Names::default();
+        self.spans = Spans::default();
         self.commits_of_others = None;
     }
 }
@@ -118,12 +129,22 @@ impl SqliteStore {
     /// Opens a ledger that writes a run for that many rows.
     pub(crate) fn with_runs(path: &Path, rows_per_run: usize) -> Result<Self, LedgerError> {
         let connection = schema::open_for_writing(path)?;
-        let mut store = Self { path: path.to_owned(), connection, cache: Cache::new(), rows_per_run };
+        let checkpoints = Checkpoints::start(path)?;
+        let mut store =
+            Self { path: path.to_owned(), connection, cache: Cache::new(), checkpoints, rows_per_run };
         // Read once now, so that the first request need not wait for it.
         let transaction = store.connection.transaction()?;
         store.cache.catch_up(&transaction)?;
         drop(transaction);
         Ok(store)
+    }
+
+    /// Lets the file grow by so many pages at most, as if the disk were full then.
+    #[cfg(test)]
+    pub(crate) fn allow_pages(&self, more: u32) -> Result<(), LedgerError> {
+        let pages: u32 = self.connection.pragma_query_value(None, "page_count", |row| row.get(0))?;
+        let query = format!("PRAGMA max_page_count = {}", pages + more);
+        Ok(self.connection.query_row(&query, [], |_| Ok(()))?)
     }
 
     fn write(&mut self, jobs: &[Job]) -> Result<Vec<Reply>, LedgerError> {
@@ -157,7 +178,10 @@ impl Store for SqliteStore {
     fn commit(&mut self, jobs: &[Job]) -> Result<Vec<Reply>, LedgerError> {
         let replies = self.write(jobs);
         match &replies {
-            Ok(_) => self.cache.committed(),
+            Ok(_) => {
+                self.cache.committed();
+                self.checkpoints.note();
+            }
             Err(_) => self.cache.rolled_back(),
         }
         if replies.is_ok() && jobs.iter().any(|job| matches!(job, Job::Delete { .. })) {

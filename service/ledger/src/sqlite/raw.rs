@@ -14,6 +14,14 @@ use crate::types::{RawOutcome, RawPair, RawRecord, ShadowScore};
 /// Outcomes of the records of a day, by the number of the record.
 pub(super) type OutcomesOfDay = HashMap<i64, RawOutcome>;
 
+/// Where the records of a model and a day are.
+pub(super) const RECORDS_OF_DAY: &str = "FROM span CROSS JOIN record ON record.number BETWEEN span.first \
+     AND span.last WHERE span.kind = 0 AND span.model = ? AND span.day = ?";
+/// Where they are together with what shadow versions made of them.
+const RECORDS_AND_SHADOWS_OF_DAY: &str = "FROM span CROSS JOIN record ON record.number BETWEEN span.first \
+     AND span.last CROSS JOIN shadow_score ON shadow_score.record = record.number \
+     WHERE span.kind = 0 AND span.model = ? AND span.day = ?";
+
 /// Days on which a model has raw records, ascending.
 pub(super) fn days_of(connection: &Connection, model: i64, days: [i64; 2]) -> Result<Vec<i64>, LedgerError> {
     let mut statement = connection
@@ -29,9 +37,10 @@ pub(super) fn outcomes_of(
     day: i64,
 ) -> Result<OutcomesOfDay, LedgerError> {
     let mut statement = connection.prepare_cached(
-        "SELECT record, name, observed_at, received FROM outcome \
+        "SELECT record, name, observed_at, received FROM span \
+         CROSS JOIN outcome ON outcome.number BETWEEN span.first AND span.last \
          JOIN category ON category.number = outcome.category \
-         WHERE outcome.model = ? AND record IS NOT NULL AND day = ?",
+         WHERE span.kind = 1 AND span.model = ? AND span.day = ?",
     )?;
     let found = statement.query_map([model, day], |row| Ok((row.get(0)?, raw_outcome(row, 1)?)))?;
     Ok(found.collect::<Result<_, _>>()?)
@@ -44,11 +53,10 @@ pub(super) fn visit_records(
     period: [i64; 2],
     visit: &mut dyn FnMut(RawRecord) -> ControlFlow<()>,
 ) -> Result<(), LedgerError> {
-    let own = format!("SELECT {RECORD_COLUMNS} FROM record WHERE model = ? AND day = ? AND version = ?");
+    let own = format!("SELECT {RECORD_COLUMNS} {RECORDS_OF_DAY} AND record.version = ?");
     let beside = format!(
         "SELECT {RECORD_COLUMNS}, shadow_score.log_odds, shadow_score.inputs, shadow_score.segments \
-         FROM record JOIN shadow_score ON shadow_score.record = record.number \
-         WHERE record.model = ? AND day = ? AND shadow_score.version = ?"
+         {RECORDS_AND_SHADOWS_OF_DAY} AND shadow_score.version = ?"
     );
     for day in days_of(connection, model, days_of_period(period))? {
         let snapshot = connection.unchecked_transaction()?;
@@ -84,8 +92,7 @@ pub(super) fn visit_pairs(
 ) -> Result<(), LedgerError> {
     let query = format!(
         "SELECT {RECORD_COLUMNS}, shadow_score.log_odds, shadow_score.inputs, shadow_score.segments \
-         FROM record JOIN shadow_score ON shadow_score.record = record.number \
-         WHERE record.model = ? AND day = ? AND record.version = ? AND shadow_score.version = ?"
+         {RECORDS_AND_SHADOWS_OF_DAY} AND record.version = ? AND shadow_score.version = ?"
     );
     for day in days_of(connection, model, days_of_period(period))? {
         let snapshot = connection.unchecked_transaction()?;

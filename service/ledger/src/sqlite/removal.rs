@@ -5,12 +5,11 @@ use rusqlite::{Connection, params};
 use super::codes::id_hash;
 use super::index::{Kind, drop_runs_before};
 use super::rows::StoredRecord;
+use super::spans::Spans;
 use super::writing::{HORIZON, Observed, Writing};
 use crate::error::LedgerError;
 use crate::fold::{Case, Event, day_of};
 use crate::types::{Act, Pruned};
-
-const MICROS_PER_DAY: i64 = 86_400_000_000;
 
 impl Writing<'_> {
     /// Removes all that is known of some ids, from the summaries too. For each id whether there was
@@ -85,19 +84,29 @@ impl Writing<'_> {
         let mut statement = self.transaction.prepare("SELECT number FROM model ORDER BY number")?;
         let models = statement.query_map([], |row| row.get(0))?.collect::<Result<Vec<i64>, _>>()?;
         for model in models {
-            let records = self.prune_records(model, horizon, most_rows)?;
+            let limits = [model, horizon, i64::from(most_rows)];
+            let records = self.prune_records(limits)?;
             let outcomes = self.prune_outcomes(
-                "SELECT number FROM outcome WHERE model = ?1 AND record IS NOT NULL AND day < ?2 LIMIT ?3",
-                [model, horizon, i64::from(most_rows)],
+                "SELECT outcome.number FROM span CROSS JOIN outcome \
+                 ON outcome.number BETWEEN span.first AND span.last \
+                 WHERE span.kind = 1 AND span.model = ?1 AND span.day < ?2 LIMIT ?3",
+                limits,
             )?;
             let waiting = self.prune_outcomes(
-                "SELECT number FROM outcome WHERE model = ?1 AND record IS NULL AND received < ?2 LIMIT ?3",
-                [model, horizon.saturating_mul(MICROS_PER_DAY), i64::from(most_rows)],
+                "SELECT number FROM outcome \
+                 WHERE model = ?1 AND record IS NULL AND received < ?2 * 86400000000 LIMIT ?3",
+                limits,
             )?;
+            let more = [records, outcomes, waiting].contains(&u64::from(most_rows));
+            if !more {
+                self.transaction.execute("DELETE FROM span WHERE model = ? AND day < ?", [model, horizon])?;
+            }
             pruned.records += records;
             pruned.outcomes += outcomes + waiting;
-            pruned.more |= [records, outcomes, waiting].contains(&u64::from(most_rows));
+            pruned.more |= more;
         }
+        // What was removed must not grow again.
+        self.cache.spans = Spans::default();
         self.drop_runs(Kind::Record, "SELECT min(number) FROM record")?;
         self.drop_runs(Kind::Outcome, "SELECT min(number) FROM outcome")?;
         // So that the next transaction learns which runs there are.
@@ -105,13 +114,13 @@ impl Writing<'_> {
         Ok(pruned)
     }
 
-    fn prune_records(&self, model: i64, horizon: i64, most_rows: u32) -> Result<u64, LedgerError> {
-        let mut statement = self
-            .transaction
-            .prepare_cached("SELECT number FROM record WHERE model = ? AND day < ? LIMIT ?")?;
-        let numbers = statement
-            .query_map([model, horizon, i64::from(most_rows)], |row| row.get(0))?
-            .collect::<Result<Vec<i64>, _>>()?;
+    fn prune_records(&self, limits: [i64; 3]) -> Result<u64, LedgerError> {
+        let mut statement = self.transaction.prepare_cached(
+            "SELECT record.number FROM span CROSS JOIN record \
+             ON record.number BETWEEN span.first AND span.last \
+             WHERE span.kind = 0 AND span.model = ? AND span.day < ? LIMIT ?",
+        )?;
+        let numbers = statement.query_map(limits, |row| row.get(0))?.collect::<Result<Vec<i64>, _>>()?;
         let mut shadows = self.transaction.prepare_cached("DELETE FROM shadow_score WHERE record = ?")?;
         let mut record = self.transaction.prepare_cached("DELETE FROM record WHERE number = ?")?;
         for number in &numbers {

@@ -49,12 +49,21 @@ pub(crate) fn open_for_reading(path: &Path) -> Result<Connection, LedgerError> {
     Ok(connection)
 }
 
+/// Another connection to a file that is open for writing.
+pub(crate) fn open_beside(path: &Path) -> Result<Connection, LedgerError> {
+    let failed = |source| LedgerError::Open { path: path.to_owned(), source: Arc::new(source) };
+    let connection = Connection::open(path).map_err(failed)?;
+    connection.busy_timeout(PATIENCE).map_err(failed)?;
+    set_up(&connection).map_err(failed)?;
+    Ok(connection)
+}
+
 /// Every commit is synced to the disk before it is acknowledged (`synchronous = FULL` with a
 /// write-ahead log).
 fn set_up(connection: &Connection) -> rusqlite::Result<()> {
     connection.execute_batch(
         "PRAGMA page_size = 8192; PRAGMA journal_mode = WAL; PRAGMA synchronous = FULL; \
-         PRAGMA cache_size = -65536; PRAGMA temp_store = MEMORY;",
+         PRAGMA cache_size = -65536; PRAGMA temp_store = MEMORY; PRAGMA wal_autocheckpoint = 4000;",
     )?;
     connection.pragma_update(None, "mmap_size", MAPPED_BYTES)?;
     connection.set_prepared_statement_cache_capacity(STATEMENTS_AT_HAND);

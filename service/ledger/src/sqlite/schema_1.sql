@@ -38,7 +38,6 @@ CREATE TABLE record (
     number INTEGER PRIMARY KEY,
     model INTEGER NOT NULL,
     version INTEGER NOT NULL,
-    day INTEGER NOT NULL,
     time INTEGER NOT NULL,
     received INTEGER NOT NULL,
     id TEXT NOT NULL,
@@ -46,7 +45,6 @@ CREATE TABLE record (
     inputs BLOB NOT NULL,
     segments TEXT NOT NULL
 ) STRICT;
-CREATE INDEX record_by_day ON record (model, day);
 
 -- What shadow versions made of a record.
 CREATE TABLE shadow_score (
@@ -59,7 +57,7 @@ CREATE TABLE shadow_score (
 ) STRICT, WITHOUT ROWID;
 
 -- In order of arrival. One that waits for its record has the id; one that is matched has the
--- number and the day of the record instead.
+-- number of the record instead.
 CREATE TABLE outcome (
     number INTEGER PRIMARY KEY,
     model INTEGER NOT NULL,
@@ -68,10 +66,8 @@ CREATE TABLE outcome (
     observed_at INTEGER NOT NULL,
     received INTEGER NOT NULL,
     record INTEGER,
-    day INTEGER,
     id TEXT
 ) STRICT;
-CREATE INDEX outcome_by_day ON outcome (model, day) WHERE record IS NOT NULL;
 CREATE INDEX outcome_waiting ON outcome (model, received) WHERE record IS NULL;
 
 -- What an outcome was before it was corrected.
@@ -84,20 +80,32 @@ CREATE TABLE former_outcome (
 ) STRICT;
 CREATE INDEX former_outcome_by_outcome ON former_outcome (outcome);
 
--- Hashes of ids and the numbers of the records (kind 0) or outcomes (kind 1) with these ids, in
--- sorted runs that are written once. What is younger than the last run is read from the tables.
+-- Which numbers of records (kind 0) and matched outcomes (kind 1) belong to which day of record
+-- time. What comes together is numbered day by day, so there are few spans for many numbers.
+CREATE TABLE span (
+    kind INTEGER NOT NULL,
+    model INTEGER NOT NULL,
+    day INTEGER NOT NULL,
+    first INTEGER NOT NULL,
+    last INTEGER NOT NULL,
+    PRIMARY KEY (kind, model, day, first)
+) STRICT, WITHOUT ROWID;
+
+-- Hashes of ids and the numbers of the records (kind 0) or outcomes (kind 1) with these ids, sorted
+-- by hash, in runs that are written once. A run is of blocks with consecutive numbers; `fences` are
+-- their first hashes. `last` is the last number in the run: what is younger is read from the tables.
 CREATE TABLE run (
     number INTEGER PRIMARY KEY,
     kind INTEGER NOT NULL,
     last INTEGER NOT NULL,
+    first_block INTEGER NOT NULL,
+    fences BLOB NOT NULL,
     filter BLOB NOT NULL
 ) STRICT;
-CREATE TABLE run_entry (
-    run INTEGER NOT NULL,
-    id_hash INTEGER NOT NULL,
-    number INTEGER NOT NULL,
-    PRIMARY KEY (run, id_hash, number)
-) STRICT, WITHOUT ROWID;
+CREATE TABLE run_block (
+    number INTEGER PRIMARY KEY,
+    entries BLOB NOT NULL
+) STRICT;
 
 -- All records of a version (field and value empty), or those of one segment.
 CREATE TABLE stream (

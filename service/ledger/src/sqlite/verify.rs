@@ -7,7 +7,7 @@ use rusqlite::{Connection, OptionalExtension};
 
 use super::codes::{stream_from_columns, summary_from_bytes};
 use super::names::{load_streams, load_version};
-use super::raw::{OutcomesOfDay, days_of, outcomes_of};
+use super::raw::{OutcomesOfDay, RECORDS_OF_DAY, days_of, outcomes_of};
 use super::rows::{RECORD_COLUMNS, load_shadows, stored_record};
 use super::writing::horizon;
 use crate::compare::difference;
@@ -53,8 +53,7 @@ impl Verification<'_> {
         }
         let outcomes = outcomes_of(&snapshot, model, day)?;
         let mut computed = ComputedDay::default();
-        let mut statement = snapshot
-            .prepare_cached(&format!("SELECT {RECORD_COLUMNS} FROM record WHERE model = ? AND day = ?"))?;
+        let mut statement = snapshot.prepare_cached(&format!("SELECT {RECORD_COLUMNS} {RECORDS_OF_DAY}"))?;
         let mut rows = statement.query([model, day])?;
         while let Some(row) = rows.next()? {
             let stored = stored_record(row)?;

@@ -4,15 +4,15 @@ use std::collections::BTreeMap;
 use std::sync::Arc;
 
 use kilter_drift::Summary;
-use rusqlite::{CachedStatement, Connection, OptionalExtension, Transaction, params};
+use rusqlite::{Connection, OptionalExtension, Transaction, params};
 
 use super::Cache;
-use super::codes::{floats_to_bytes, id_hash, segments_to_text, summary_from_bytes, summary_to_bytes};
+use super::codes::{summary_from_bytes, summary_to_bytes};
 use super::rows::{StoredOutcome, StoredRecord, load_outcome, load_record, load_shadows};
 use crate::error::LedgerError;
-use crate::fold::{Case, Event, FoldedVersion, WindowKey, day_of};
+use crate::fold::{Case, Event, FoldedVersion, WindowKey};
 use crate::store::{Job, Reply};
-use crate::types::{NewOutcome, NewRecord, OutcomeState, Outcomes, Records, ShadowScore, ShadowScores};
+use crate::types::ShadowScore;
 
 /// A transaction being filled.
 pub(super) struct Writing<'a> {
@@ -27,14 +27,6 @@ pub(super) struct Writing<'a> {
 pub(super) struct Observed {
     pub(super) category: i64,
     pub(super) observed_at: i64,
-}
-
-/// What a request keeps of its model while its rows are written.
-struct Batch<'a> {
-    model: i64,
-    version: Arc<FoldedVersion>,
-    received: i64,
-    insert: CachedStatement<'a>,
 }
 
 impl<'a> Writing<'a> {
@@ -71,6 +63,7 @@ impl<'a> Writing<'a> {
         for ((stream, day), summary) in self.cache.windows.changed() {
             statement.execute(params![stream, day, summary_to_bytes(summary)?])?;
         }
+        self.cache.spans.write(self.transaction)?;
         let mut statement = self.transaction.prepare_cached(
             "INSERT INTO day (model, day, records, matched) VALUES (?, ?, ?, ?) ON CONFLICT DO UPDATE \
              SET records = records + excluded.records, matched = matched + excluded.matched",
@@ -92,160 +85,6 @@ impl<'a> Writing<'a> {
     ) -> Result<Arc<FoldedVersion>, LedgerError> {
         let number = self.cache.names.version_number(self.transaction, model, fingerprint)?;
         self.cache.names.version(self.transaction, number)
-    }
-
-    fn records(&mut self, records: &Records, shadows: &[ShadowScores]) -> Result<Vec<bool>, LedgerError> {
-        let model = self.model(&records.model)?;
-        let version = self.version_of((model, &records.model), &records.version)?;
-        let shadows = shadows
-            .iter()
-            .map(|shadow| Ok((self.version_of((model, &records.model), &shadow.version)?, &shadow.scores)))
-            .collect::<Result<Vec<_>, LedgerError>>()?;
-        let insert = self.transaction.prepare_cached(
-            "INSERT INTO record (number, model, version, day, time, received, id, log_odds, inputs, segments) \
-             VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?)",
-        )?;
-        let mut batch = Batch { model, version, received: records.received, insert };
-        let mut repeated = Vec::with_capacity(records.records.len());
-        for (position, record) in records.records.iter().enumerate() {
-            let scores = shadows.iter().filter_map(|(version, scores)| {
-                scores.get(position).and_then(Option::as_ref).map(|score| (version.as_ref(), score))
-            });
-            repeated.push(!self.record(&mut batch, record, scores)?);
-        }
-        Ok(repeated)
-    }
-
-    /// Keeps a record and folds it, with the outcome that waited for it; `false` where the id was
-    /// there already.
-    fn record<'s>(
-        &mut self,
-        batch: &mut Batch,
-        record: &NewRecord,
-        shadows: impl Iterator<Item = (&'s FoldedVersion, &'s ShadowScore)>,
-    ) -> Result<bool, LedgerError> {
-        let hash = id_hash(batch.model, &record.id);
-        if self.find_record(batch.model, &record.id, hash)?.is_some() {
-            return Ok(false);
-        }
-        let number = self.insert_record(batch, record, hash)?;
-        let case = Case::of_record(record);
-        self.count(batch.model, case.day(), [1, 0]);
-        self.fold(&batch.version, &case, Event::Scored)?;
-        let waiting = self.find_waiting(batch.model, &record.id, hash)?;
-        let observed = waiting.as_ref().map(Observed::of);
-        if let Some(observed) = observed {
-            self.fold_outcome(&batch.version, &case, observed, false)?;
-        }
-        for (version, score) in shadows {
-            self.insert_shadow(number, version, score)?;
-            let case = Case::of_shadow(&record.id, record.time, score);
-            self.fold(version, &case, Event::Scored)?;
-            if let Some(observed) = observed {
-                self.fold_outcome(version, &case, observed, false)?;
-            }
-        }
-        if let Some(outcome) = waiting {
-            self.count(batch.model, case.day(), [0, 1]);
-            self.transaction
-                .prepare_cached("UPDATE outcome SET record = ?, day = ?, id = NULL WHERE number = ?")?
-                .execute([number, case.day(), outcome.number])?;
-        }
-        Ok(true)
-    }
-
-    fn insert_record(
-        &mut self,
-        batch: &mut Batch,
-        record: &NewRecord,
-        hash: i64,
-    ) -> Result<i64, LedgerError> {
-        let number = self.cache.records.next_number();
-        batch.insert.execute(params![
-            number,
-            batch.model,
-            batch.version.number,
-            day_of(record.time),
-            record.time,
-            batch.received,
-            record.id,
-            floats_to_bytes(&record.log_odds),
-            floats_to_bytes(&record.inputs),
-            segments_to_text(&record.segments)?,
-        ])?;
-        self.cache.records.add(hash);
-        Ok(number)
-    }
-
-    fn insert_shadow(
-        &mut self,
-        record: i64,
-        version: &FoldedVersion,
-        score: &ShadowScore,
-    ) -> Result<(), LedgerError> {
-        self.cache.names.note_shadows();
-        self.transaction
-            .prepare_cached(
-                "INSERT INTO shadow_score (record, version, log_odds, inputs, segments) VALUES (?, ?, ?, ?, ?)",
-            )?
-            .execute(params![
-                record,
-                version.number,
-                floats_to_bytes(&score.log_odds),
-                floats_to_bytes(&score.inputs),
-                segments_to_text(&score.segments)?,
-            ])?;
-        Ok(())
-    }
-
-    fn outcomes(&mut self, outcomes: &Outcomes) -> Result<Vec<OutcomeState>, LedgerError> {
-        let model = self.model(&outcomes.model)?;
-        outcomes.outcomes.iter().map(|outcome| self.outcome(model, outcome, outcomes.received)).collect()
-    }
-
-    fn outcome(
-        &mut self,
-        model: i64,
-        outcome: &NewOutcome,
-        received: i64,
-    ) -> Result<OutcomeState, LedgerError> {
-        let hash = id_hash(model, &outcome.id);
-        let record = self.find_record(model, &outcome.id, hash)?;
-        let version = match &record {
-            Some(record) => Some(self.cache.names.version(self.transaction, record.version)?),
-            None => self.cache.names.live(self.transaction, model)?,
-        };
-        let Some(version) = version else {
-            return Ok(OutcomeState::Refused("no version of the model is live".into()));
-        };
-        if version.category(&outcome.category).is_none() {
-            let known = version.frame.categories().join("`, `");
-            let reason = format!("`{}` is no category of the model; it has `{known}`", outcome.category);
-            return Ok(OutcomeState::Refused(reason));
-        }
-        let category = self.cache.names.category(self.transaction, model, &outcome.category)?;
-        let observed = Observed { category, observed_at: outcome.observed_at.unwrap_or(received) };
-        let former = match &record {
-            Some(record) => self.find_matched(model, record.number, hash)?,
-            None => self.find_waiting(model, &outcome.id, hash)?,
-        };
-        if former.as_ref().is_some_and(|former| former.category == category) {
-            return Ok(OutcomeState::Repeated);
-        }
-        if let Some(former) = &former {
-            self.replace_outcome(former, observed, received)?;
-        } else {
-            self.insert_outcome((model, hash), outcome, record.as_ref(), observed, received)?;
-        }
-        if let Some(record) = &record {
-            self.fold_correction(&version, record, former.as_ref().map(Observed::of), Some(observed))?;
-            self.count(model, day_of(record.record.time), [0, i64::from(former.is_none())]);
-        }
-        Ok(match (&record, &former) {
-            (_, Some(_)) => OutcomeState::Corrected,
-            (Some(_), None) => OutcomeState::Matched,
-            (None, None) => OutcomeState::Waiting,
-        })
     }
 
     /// Folds the change of a record's outcome for its version and all shadow versions.
@@ -291,7 +130,7 @@ impl<'a> Writing<'a> {
     }
 
     /// Folds an outcome in or out, unless it is of a category that the version does not know.
-    fn fold_outcome(
+    pub(super) fn fold_outcome(
         &mut self,
         version: &FoldedVersion,
         case: &Case,
@@ -340,61 +179,25 @@ impl<'a> Writing<'a> {
         counts[1] += matched;
     }
 
-    fn insert_outcome(
-        &mut self,
-        (model, hash): (i64, i64),
-        outcome: &NewOutcome,
-        record: Option<&StoredRecord>,
-        observed: Observed,
-        received: i64,
-    ) -> Result<(), LedgerError> {
-        self.transaction
-            .prepare_cached(
-                "INSERT INTO outcome (number, model, id_hash, category, observed_at, received, record, day, id) \
-                 VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?)",
-            )?
-            .execute(params![
-                self.cache.outcomes.next_number(),
-                model,
-                hash,
-                observed.category,
-                observed.observed_at,
-                received,
-                record.map(|record| record.number),
-                record.map(|record| day_of(record.record.time)),
-                record.is_none().then_some(&outcome.id),
-            ])?;
-        self.cache.outcomes.add(hash);
-        Ok(())
-    }
-
-    fn replace_outcome(
-        &self,
-        former: &StoredOutcome,
-        observed: Observed,
-        received: i64,
-    ) -> Result<(), LedgerError> {
-        self.transaction
-            .prepare_cached(
-                "INSERT INTO former_outcome (outcome, category, observed_at, received) VALUES (?, ?, ?, ?)",
-            )?
-            .execute([former.number, former.category, former.observed_at, former.received])?;
-        self.transaction
-            .prepare_cached(
-                "UPDATE outcome SET category = ?, observed_at = ?, received = ? WHERE number = ?",
-            )?
-            .execute([observed.category, observed.observed_at, received, former.number])?;
-        Ok(())
-    }
-
     pub(super) fn find_record(
         &self,
         model: i64,
         id: &str,
         hash: i64,
     ) -> Result<Option<StoredRecord>, LedgerError> {
-        for number in self.cache.records.candidates(self.transaction, hash)? {
-            if let Some(record) = load_record(self.transaction, (model, id), number)? {
+        let candidates = self.cache.records.candidates(self.transaction, hash)?;
+        self.record_among(model, id, &candidates)
+    }
+
+    /// The record with an id among those whose ids have its hash.
+    pub(super) fn record_among(
+        &self,
+        model: i64,
+        id: &str,
+        candidates: &[i64],
+    ) -> Result<Option<StoredRecord>, LedgerError> {
+        for number in candidates {
+            if let Some(record) = load_record(self.transaction, (model, id), *number)? {
                 return Ok(Some(record));
             }
         }

@@ -7,7 +7,8 @@ use std::sync::mpsc::{Receiver, Sender, channel};
 use std::sync::{Arc, Mutex};
 
 use super::parcels::{
-    DAY, MODEL, START, delete, keep, observe, outcome, record, records, verified, version, with_live,
+    DAY, MODEL, START, delete, keep, observe, outcome, outcomes, record, records, verified, version,
+    with_live,
 };
 use super::places::{Place, SqlitePlace};
 use crate::sqlite::{SqliteStore, restore};
@@ -174,6 +175,45 @@ fn what_is_no_ledger_is_refused() {
     assert_eq!(std::fs::read(&others).unwrap(), before);
     let missing = LedgerUrl::Sqlite(folder.path().join("no such folder/ledger.db"));
     assert!(matches!(Ledger::open(&missing, Settings::default()), Err(LedgerError::Open { .. })));
+}
+
+/// On a disk that is full and emptied again, requests fail as a whole and can be sent again.
+#[test]
+fn a_full_disk_refuses_whole_requests_and_loses_nothing() {
+    let place = SqlitePlace::new();
+    let live = with_live(&place.open());
+    let mut store = SqliteStore::with_runs(&place.path(), 50).unwrap();
+    let ids = |batch: u32| (0..200).map(move |i| format!("S-{batch}-{i}"));
+    let batch_of = |batch: u32| {
+        let new = ids(batch).map(|id| record(&id, START + i64::from(batch % 3) * DAY, batch)).collect();
+        Job::Records(records(&live, new))
+    };
+    let outcomes_of =
+        |batch: u32| Job::Outcomes(outcomes(ids(batch).map(|id| outcome(&id, "carded", START)).collect()));
+    let (mut kept, mut refused) = (Vec::new(), 0);
+    for batch in 0..12 {
+        store.allow_pages(batch % 4 * 2).unwrap();
+        for job in [batch_of(batch), outcomes_of(batch)] {
+            match store.commit(&[job]) {
+                Ok(_) => kept.push(batch),
+                Err(LedgerError::Storage(_)) => refused += 1,
+                Err(other) => panic!("{other}"),
+            }
+        }
+        // Housekeeping may fail on a full disk, too; it is tried again later.
+        let _ = store.maintain();
+    }
+    assert!(refused >= 6 && kept.len() >= 6, "{refused} refused, {kept:?} kept");
+    store.allow_pages(1 << 20).unwrap();
+    for batch in 0..12 {
+        store.commit(&[batch_of(batch), outcomes_of(batch)]).unwrap();
+        store.maintain().unwrap();
+    }
+    drop(store);
+    let ledger = place.open();
+    let counts = ledger.counts(MODEL).unwrap();
+    assert_eq!((counts.records, counts.matched, counts.waiting_outcomes), (12 * 200, 12 * 200, 0));
+    verified(&ledger);
 }
 
 #[test]

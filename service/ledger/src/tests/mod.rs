@@ -40,6 +40,7 @@ macro_rules! whole_suite {
                 files_are_recognised_by_their_content,
                 what_was_written_is_there_after_reopening,
                 two_handles_see_each_other,
+                a_failure_hides_nothing_that_others_write,
                 damage_is_found,
             }
             suite_versions {

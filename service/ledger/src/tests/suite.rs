@@ -318,6 +318,22 @@ pub(super) fn two_handles_see_each_other(place: &dyn Place) {
     verified(&one);
 }
 
+/// Few rows, so that the other handle's are in no run and must be read from where this one stopped.
+pub(super) fn a_failure_hides_nothing_that_others_write(place: &dyn Place) {
+    let (one, other) = (place.open(), place.open());
+    let live = with_live(&one);
+    let new = |round: &str| -> Vec<NewRecord> {
+        (0..5).map(|i| record(&format!("{round}-{i}"), START, i)).collect()
+    };
+    let mut with_bad = new("failed");
+    with_bad.push(NewRecord { log_odds: vec![1.0], ..record("S-bad", START, 1) });
+    assert!(one.write(Job::Records(records(&live, with_bad))).is_err());
+    assert_eq!(keep(&other, &live, new("S")), [false; 5]);
+    assert_eq!(keep(&one, &live, new("S")), [true; 5]);
+    assert_eq!(one.counts(MODEL).unwrap().records, 5);
+    verified(&one);
+}
+
 pub(super) fn damage_is_found(place: &dyn Place) {
     let ledger = place.open();
     let live = with_live(&ledger);
