@@ -4,8 +4,15 @@
 //! matrix of zeros and ones. A term is the product of at most two dense columns and at most two
 //! levels; the intercept is the empty product.
 
+use std::collections::HashMap;
+
 use crate::batch::{CellKind, ColumnSpec};
-use crate::file::{Field, Form, INTERCEPT, MissingFlag, MissingNumber, ModelFile, NumberField};
+use crate::file::{Field, INTERCEPT, MissingFlag, MissingNumber, ModelFile, NumberField};
+use crate::limits::LARGEST_TERMS;
+
+mod size;
+
+use size::check_size;
 
 /// Why a design cannot be made from fields and interactions.
 #[derive(Debug, Clone, PartialEq, Eq, thiserror::Error)]
@@ -24,6 +31,27 @@ pub enum DesignError {
         field: String,
         /// The level that is missing.
         level: String,
+    },
+    /// More terms than a model may have.
+    #[error(
+        "the fields and interactions make {found} terms, and a model may have {LARGEST_TERMS}; `{most}` alone \
+         makes {its_terms}: merge levels, lower the degree or leave it out"
+    )]
+    TooManyTerms {
+        /// How many terms there would be.
+        found: u64,
+        /// The field or interaction that makes the most.
+        most: String,
+        /// How many it makes.
+        its_terms: u64,
+    },
+    /// Names of terms that no model file could hold.
+    #[error(
+        "the names of the terms would take {found} bytes, more than a model file may have; shorten levels"
+    )]
+    TooLongNames {
+        /// How many bytes there would be.
+        found: u64,
     },
 }
 
@@ -84,29 +112,24 @@ impl Design {
     /// order, then those of each interaction in order.
     ///
     /// # Errors
-    /// [`DesignError`] where interactions or reference levels name what is not there.
+    /// [`DesignError`] where interactions or reference levels name what is not there, and where
+    /// there would be more than [`LARGEST_TERMS`]; the last is found before anything is made.
     pub fn new(fields: &[Field], interactions: &[[String; 2]]) -> Result<Self, DesignError> {
+        let pairs = interacting(fields, interactions)?;
+        check_size(fields, &pairs)?;
         let mut design =
             Self { fields: fields.to_vec(), dense: Vec::new(), level_fields: Vec::new(), terms: Vec::new() };
         design.terms.push(Term { name: INTERCEPT.into(), ..Term::default() });
         let mut terms_of_field = Vec::with_capacity(fields.len());
         for (index, field) in fields.iter().enumerate() {
+            let start = design.terms.len();
             let terms = design.field_terms(index, field)?;
-            design.terms.extend(terms.iter().cloned());
-            terms_of_field.push(terms);
+            design.terms.extend(terms);
+            terms_of_field.push(start..design.terms.len());
         }
-        for [first, second] in interactions {
-            let position = |name: &String| {
-                fields
-                    .iter()
-                    .position(|f| f.name() == name)
-                    .ok_or_else(|| DesignError::UnknownField(name.clone()))
-            };
-            let (a, b) = (position(first)?, position(second)?);
-            if a == b {
-                return Err(DesignError::WithItself(first.clone()));
-            }
-            let products = design.products(&terms_of_field[a], &terms_of_field[b]);
+        for (first, second) in pairs {
+            let (first, second) = (terms_of_field[first].clone(), terms_of_field[second].clone());
+            let products = design.products(&design.terms[first], &design.terms[second]);
             design.terms.extend(products);
         }
         Ok(design)
@@ -197,11 +220,12 @@ impl Design {
 
     /// Products of the terms of two fields; terms for missing values take no part.
     fn products(&self, left: &[Term], right: &[Term]) -> Vec<Term> {
-        let usable = |terms: &[Term]| {
-            terms.iter().filter(|term| !self.is_missing_flag(term)).cloned().collect::<Vec<_>>()
-        };
-        let right = usable(right);
-        usable(left).iter().flat_map(|l| right.iter().map(|r| product(l, r))).collect()
+        let right: Vec<&Term> = self.without_missing_flags(right).collect();
+        self.without_missing_flags(left).flat_map(|l| right.iter().map(move |r| product(l, r))).collect()
+    }
+
+    fn without_missing_flags<'a>(&self, terms: &'a [Term]) -> impl Iterator<Item = &'a Term> {
+        terms.iter().filter(|term| !self.is_missing_flag(term))
     }
 
     fn is_missing_flag(&self, term: &Term) -> bool {
@@ -259,6 +283,22 @@ impl Design {
     }
 }
 
+/// Indices of the fields of each interaction.
+fn interacting(fields: &[Field], interactions: &[[String; 2]]) -> Result<Vec<(usize, usize)>, DesignError> {
+    let mut positions = HashMap::new();
+    for (index, field) in fields.iter().enumerate() {
+        positions.entry(field.name()).or_insert(index);
+    }
+    let position = |name: &String| {
+        positions.get(name.as_str()).copied().ok_or_else(|| DesignError::UnknownField(name.clone()))
+    };
+    let pair = |[first, second]: &[String; 2]| {
+        let pair = (position(first)?, position(second)?);
+        if pair.0 == pair.1 { Err(DesignError::WithItself(first.clone())) } else { Ok(pair) }
+    };
+    interactions.iter().map(pair).collect()
+}
+
 fn product(left: &Term, right: &Term) -> Term {
     let join = |a: &[usize], b: &[usize]| a.iter().chain(b).copied().collect::<Vec<_>>();
     Term {
@@ -269,91 +309,10 @@ fn product(left: &Term, right: &Term) -> Term {
     }
 }
 
-impl Form {
-    /// Number of columns that a number becomes.
-    pub fn columns(&self) -> usize {
-        match self {
-            Self::AsIs | Self::Log | Self::Log1p => 1,
-            Self::Polynomial(degree) => *degree as usize,
-            Self::Spline(spline) => spline.knots.len().saturating_sub(1),
-        }
-    }
-
-    /// Name of a column, from the name of the field.
-    pub fn column_name(&self, field: &str, basis: usize) -> String {
-        match self {
-            Self::AsIs => field.to_owned(),
-            Self::Log => format!("log({field})"),
-            Self::Log1p => format!("log1p({field})"),
-            Self::Polynomial(_) | Self::Spline(_) if basis == 0 => field.to_owned(),
-            Self::Polynomial(_) => format!("{field}^{}", basis + 1),
-            Self::Spline(_) => format!("spline{basis}({field})"),
-        }
-    }
-
-    /// Value of a column for a number.
-    pub fn column(&self, basis: usize, value: f64) -> f64 {
-        match self {
-            Self::AsIs => value,
-            Self::Log => value.ln(),
-            Self::Log1p => value.ln_1p(),
-            Self::Polynomial(_) => value.powi(basis as i32 + 1),
-            Self::Spline(spline) if basis > 0 => restricted_cubic(&spline.knots, basis - 1, value),
-            Self::Spline(_) => value,
-        }
-    }
-
-    /// Derivative of a column with respect to the number.
-    pub fn derivative(&self, basis: usize, value: f64) -> f64 {
-        match self {
-            Self::AsIs => 1.0,
-            Self::Log => value.recip(),
-            Self::Log1p => (1.0 + value).recip(),
-            Self::Polynomial(_) => (basis as f64 + 1.0) * value.powi(basis as i32),
-            Self::Spline(spline) if basis > 0 => restricted_cubic_slope(&spline.knots, basis - 1, value),
-            Self::Spline(_) => 1.0,
-        }
-    }
-
-    /// Why a number cannot be used with this form; `None` where it can.
-    pub fn objection(&self, value: f64) -> Option<&'static str> {
-        match self {
-            Self::Log if value <= 0.0 => Some("is not above 0, so it has no logarithm"),
-            Self::Log1p if value <= -1.0 => Some("is not above -1, so one plus it has no logarithm"),
-            _ => None,
-        }
-    }
-}
-
-/// Nonlinear column `r` of a restricted cubic spline (Stone and Koo 1985; scaled by the squared
-/// distance of the outer knots, as Harrell 2001), linear beyond the outer knots.
-///
-/// From the last knot on it is continued by its tangent: there the cubes would cancel.
-fn restricted_cubic(knots: &[f64], r: usize, value: f64) -> f64 {
-    let last = knots[knots.len() - 1];
-    if value > last {
-        return restricted_cubic(knots, r, last) + restricted_cubic_slope(knots, r, last) * (value - last);
-    }
-    truncated_powers(knots, r, value, 3)
-}
-
-fn restricted_cubic_slope(knots: &[f64], r: usize, value: f64) -> f64 {
-    3.0 * truncated_powers(knots, r, value.min(knots[knots.len() - 1]), 2)
-}
-
-fn truncated_powers(knots: &[f64], r: usize, value: f64, power: i32) -> f64 {
-    let (first, before_last, last) = (knots[0], knots[knots.len() - 2], knots[knots.len() - 1]);
-    let above = |knot: f64| (value - knot).max(0.0).powi(power);
-    let gap = last - before_last;
-    let sum = above(knots[r]) - above(before_last) * (last - knots[r]) / gap
-        + above(last) * (before_last - knots[r]) / gap;
-    sum / ((last - first) * (last - first))
-}
-
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::file::{FlagField, LevelsField, Means, Spline};
+    use crate::file::{FlagField, Form, LevelsField, Means};
 
     fn number(name: &str, form: Form, missing: MissingNumber) -> Field {
         Field::Number(NumberField {
@@ -416,41 +375,28 @@ mod tests {
         assert_eq!(same, Err(DesignError::WithItself("dwelling".into())));
     }
 
-    /// Values computed with Hmisc 4.8 `rcspline.eval(x, knots, inclx = TRUE, norm = 2)` in R 4.2.2.
     #[test]
-    fn restricted_cubic_spline_equals_hmisc() {
-        let form = Form::Spline(Spline { knots: vec![0.19, 1.765, 3.0, 4.415] });
-        assert_eq!(form.columns(), 3);
-        for (x, second, third) in [
-            (-1.0, 0.0, 0.0),
-            (1.0, 0.029_771_562_6, 0.0),
-            (2.0, 0.332_186_744_2, 0.000_727_026_4),
-            (4.0, 2.931_016_436_4, 0.520_516_024_3),
-            (6.0, 6.913_597_633_1, 1.617_066_909_4),
-            (9.0, 12.899_396_449_7, 3.267_135_184_3),
-        ] {
-            assert!((form.column(1, x) - second).abs() < 1e-9, "{x}: {}", form.column(1, x));
-            assert!((form.column(2, x) - third).abs() < 1e-9, "{x}: {}", form.column(2, x));
-        }
-        assert!((form.derivative(1, 3.0) - 1.327_029_165_6).abs() < 1e-9);
-        assert!((form.column(1, 1e7) - 19_952_657.7).abs() < 0.1, "far out the tangent keeps its digits");
-    }
-
-    #[test]
-    fn derivatives_agree_with_differences() {
-        let spline = Form::Spline(Spline { knots: vec![0.5, 1.0, 2.0, 4.0, 5.0] });
-        for form in [Form::AsIs, Form::Log, Form::Log1p, Form::Polynomial(3), spline] {
-            for basis in 0..form.columns() {
-                for x in [0.3, 0.9, 1.7, 3.3, 4.9, 6.0] {
-                    let h = 1e-5;
-                    let difference = (form.column(basis, x + h) - form.column(basis, x - h)) / (2.0 * h);
-                    let derivative = form.derivative(basis, x);
-                    assert!(
-                        (difference - derivative).abs() < 1e-6 * (1.0 + derivative.abs()),
-                        "{form:?} {x}"
-                    );
-                }
-            }
-        }
+    fn designs_beyond_the_limits_are_refused_before_they_are_made() {
+        let many = |name: &str, count: usize, padding: usize| {
+            Field::Levels(LevelsField {
+                name: name.into(),
+                levels: (0..count).map(|level| format!("{level:padding$}")).collect(),
+                reference: format!("{:padding$}", 0),
+                merged: std::collections::BTreeMap::new(),
+                unseen: "refuse".into(),
+                missing: "refuse".into(),
+            })
+        };
+        let pair = [["street".into(), "depot".into()]];
+        let crossed = Design::new(&[many("street", 30_001, 1), many("depot", 30_001, 1)], &pair);
+        let Err(DesignError::TooManyTerms { found, most, its_terms }) = crossed else {
+            panic!("{crossed:?}")
+        };
+        assert_eq!((found, most.as_str(), its_terms), (900_060_001, "street:depot", 900_000_000));
+        let powers = Design::new(&[number("rain", Form::Polynomial(u32::MAX), MissingNumber::Refuse)], &[]);
+        let Err(DesignError::TooManyTerms { found, most, .. }) = powers else { panic!("{powers:?}") };
+        assert_eq!((found, most.as_str()), (1 + u64::from(u32::MAX), "rain"));
+        let long = Design::new(&[many("street", 300, 10_000), many("depot", 300, 10_000)], &pair);
+        assert!(matches!(long, Err(DesignError::TooLongNames { .. })), "names of 1.8 GB are not made");
     }
 }

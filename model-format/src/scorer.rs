@@ -3,6 +3,8 @@
 //! Files, posted records and the evaluation of a fit all come here, so the same record has the
 //! same probabilities to the last bit wherever it was scored.
 
+use std::collections::HashMap;
+
 use crate::batch::{Batch, ColumnSpec, Refusal};
 use crate::coding::{Coded, Coder};
 use crate::design::{Design, DesignError};
@@ -23,15 +25,17 @@ pub struct Scorer {
 /// Terms that share their dense columns and level fields: one product of dense columns times one
 /// row of coefficients, looked up by the levels of the record.
 #[derive(Debug, Clone, PartialEq)]
-struct Block {
-    dense: Vec<usize>,
+pub(crate) struct Block {
+    /// The dense columns that are multiplied.
+    pub(crate) dense: Vec<usize>,
     /// Fields whose levels select the row, and the number of levels of each.
-    level_fields: Vec<(usize, usize)>,
+    pub(crate) level_fields: Vec<(usize, usize)>,
     /// For each combination of levels the term that applies; `NO_TERM` where none does.
-    terms: Vec<u32>,
+    pub(crate) terms: Vec<u32>,
 }
 
-const NO_TERM: u32 = u32::MAX;
+/// Where no term applies in a [`Block`].
+pub(crate) const NO_TERM: u32 = u32::MAX;
 
 /// Scored records of one batch.
 #[derive(Debug, Clone, PartialEq, Default)]
@@ -174,22 +178,20 @@ impl Scorer {
 }
 
 /// Groups terms that differ only in their levels.
-fn blocks(design: &Design) -> Vec<Block> {
+pub(crate) fn blocks(design: &Design) -> Vec<Block> {
     let level_count = |slot: usize| match &design.fields()[design.level_fields()[slot]] {
         crate::file::Field::Levels(levels) => levels.levels.len(),
         _ => 0,
     };
-    let mut keys: Vec<(Vec<usize>, Vec<usize>)> = Vec::new();
+    let mut positions: HashMap<(Vec<usize>, Vec<usize>), usize> = HashMap::new();
     let mut blocks: Vec<Block> = Vec::new();
     for (index, term) in design.terms().iter().enumerate() {
         let slots: Vec<usize> = term.levels.iter().map(|&(slot, _)| slot).collect();
-        let key = (term.dense.clone(), slots.clone());
-        let position = keys.iter().position(|known| *known == key).unwrap_or_else(|| {
+        let position = *positions.entry((term.dense.clone(), slots)).or_insert_with_key(|(dense, slots)| {
             let level_fields: Vec<(usize, usize)> =
                 slots.iter().map(|&slot| (design.level_fields()[slot], level_count(slot))).collect();
             let cells = level_fields.iter().map(|&(_, levels)| levels).product();
-            blocks.push(Block { dense: term.dense.clone(), level_fields, terms: vec![NO_TERM; cells] });
-            keys.push(key);
+            blocks.push(Block { dense: dense.clone(), level_fields, terms: vec![NO_TERM; cells] });
             blocks.len() - 1
         });
         let block = &mut blocks[position];
