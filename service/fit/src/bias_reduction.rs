@@ -10,11 +10,12 @@ use faer::{Mat, MatRef};
 use crate::alias::sweep;
 use crate::chunk::Chunk;
 use crate::error::FitError;
-use crate::estimate::{Likelihood, Method, Solution, layout_after, products_at_start};
+use crate::estimate::{Method, Solution, cross_products, layout_after};
 use crate::layout::Layout;
 use crate::likelihood::{Coefficients, Order, add_linear, for_each_block};
 use crate::linear::{Factor, dot};
 use crate::newton::{Evaluation, Iterate, Objective, Optimum};
+use crate::objective::Likelihood;
 use crate::reduce::{Merge, add_all};
 use crate::resolve::Resolved;
 use crate::table::Table;
@@ -219,7 +220,7 @@ pub(crate) fn estimate_bias_reduced(
     resolved: &Resolved,
     watch: &mut dyn FnMut(u64, Iterate),
 ) -> Result<Solution, FitError> {
-    let products = products_at_start(table, resolved)?;
+    let products = cross_products(table, resolved)?;
     let swept = sweep(products.as_ref());
     let layout = layout_after(resolved, &swept);
     let (optimum, log_likelihood) = BiasReduction::new(table, &layout, resolved).maximise(watch)?;

@@ -80,6 +80,22 @@ impl Chunk {
         }
     }
 
+    /// Adds the rows of another chunk of the same fields.
+    pub(crate) fn append(&mut self, other: Self) {
+        for (own, other) in self.fields.iter_mut().zip(other.fields) {
+            match (own, other) {
+                (ChunkColumn::Numbers(own), ChunkColumn::Numbers(other)) => own.extend(other),
+                (ChunkColumn::Levels(own), ChunkColumn::Levels(other)) => own.extend(other),
+                _ => {}
+            }
+        }
+        self.category.extend(other.category);
+        self.count.extend(other.count);
+        self.weight.extend(other.weight);
+        self.cluster.extend(other.cluster);
+        self.key.extend(other.key);
+    }
+
     /// The rows of some categories, which are numbered anew in the order given.
     pub(crate) fn of_categories(&self, categories: &[usize]) -> Self {
         let number = |row: &usize| categories.iter().position(|&known| known == self.category[*row] as usize);

@@ -2,18 +2,22 @@
 
 use crate::chunk::Chunk;
 use crate::error::FitError;
-use crate::estimate::{Likelihood, explain, start_of};
+use crate::estimate::start_of;
 use crate::layout::Layout;
 use crate::likelihood::Order;
 use crate::newton::{Objective, approach};
+use crate::objective::Likelihood;
 use crate::reduce::{Merge, add_all};
 use crate::resolve::Resolved;
 use crate::ridge::{Penalised, Penalty, penalised_layout};
 use crate::split::draw;
 use crate::table::Table;
+use crate::trouble::explain;
 
 /// Penalties tried: powers of ten from 1 down to -5 in steps of a quarter.
 const STEPS: i32 = 24;
+/// How near the optimum a fit is left, in standard errors: its loss is then right to the square.
+const NEAR: f64 = 1e-4;
 /// Seed of the folds.
 const SEED: u64 = 0;
 
@@ -186,9 +190,9 @@ impl Path<'_> {
         let mut losses = Vec::with_capacity(grid.len());
         for &rho in grid {
             let likelihood = Likelihood::of_view(table, self.layout, &training, &others);
-            let mut objective = Penalised { likelihood, penalty: self.penalty, rho };
+            let mut objective = Penalised::new(likelihood, self.penalty, rho);
             let at = objective.evaluate(&point, Order::Information)?;
-            point = approach(&mut objective, point, at)
+            point = approach(&mut objective, point, at, NEAR)
                 .map_err(|stopped| explain(self.resolved, self.layout, stopped))?;
             let mut likelihood = Likelihood::of_view(table, self.layout, held_out, &own);
             let value = likelihood.evaluate(&point, Order::Value)?.value;

@@ -87,6 +87,11 @@ pub enum FitError {
     /// The maximum likelihood estimate does not exist.
     #[error("{0}")]
     Separated(Box<SeparationReport>),
+    /// Neither the optimiser nor the linear programme found out whether there is an estimate.
+    #[error(
+        "could not decide whether the data separate the categories; look for numbers of extreme size and terms that nearly determine each other"
+    )]
+    Undecided,
     /// The optimiser did not get there.
     #[error(
         "the fit did not converge in {iterations} steps: the estimate is still {decrement:.1e} standard errors from the optimum; look for numbers of extreme size, or give `fit.ridge` a value"

@@ -1,19 +1,19 @@
 //! Maximum likelihood on a table: which terms stay, where the optimum is.
 
-use std::borrow::Cow;
-
 use faer::Mat;
 
 use crate::alias::{Sweep, sweep};
-use crate::chunk::Chunk;
+use crate::cross::CrossProducts;
 use crate::error::FitError;
 use crate::layout::Layout;
-use crate::likelihood::{Coefficients, Order, Sums, Workspace, add_chunk};
+use crate::likelihood::{Coefficients, Order, add_weighted_products};
 use crate::linear::Factor;
-use crate::newton::{Evaluation, Iterate, Objective, Optimum, Stopped, maximise};
+use crate::newton::{Iterate, Objective, Optimum, Stopped, maximise};
+use crate::objective::{Likelihood, View};
 use crate::resolve::Resolved;
-use crate::separation::{Margins, SeparationReport};
+use crate::start::near_optimum;
 use crate::table::Table;
+use crate::trouble::{diagnose, explain};
 
 /// Largest number of coefficients: their information matrix then takes 72 megabytes.
 const MOST_COEFFICIENTS: usize = 3000;
@@ -26,7 +26,7 @@ pub(crate) struct Solution {
     /// The terms that were left out.
     pub(crate) swept: Sweep,
     pub(crate) optimum: Optimum,
-    /// Cross-products of all terms, up to a factor, in design order.
+    /// Weighted cross-products of all terms, in design order.
     pub(crate) products: Mat<f64>,
     /// The log-likelihood itself, without a penalty.
     pub(crate) log_likelihood: f64,
@@ -62,26 +62,26 @@ pub(crate) fn estimate(
     resolved: &Resolved,
     watch: &mut dyn FnMut(u64, Iterate),
 ) -> Result<Solution, FitError> {
-    let terms = resolved.design.terms().len();
-    check_size(resolved)?;
-    let mut layout = Layout::new(&resolved.design, &resolved.scaling, &vec![true; terms]);
-    let mut start = start_of(&resolved.category_weights, layout.order());
-    let (mut at, products) = Likelihood::new(table, &layout, resolved).evaluate_with_products(&start)?;
+    let products = cross_products(table, resolved)?;
     let swept = sweep(products.as_ref());
-    if !swept.aliased.is_empty() {
-        layout = layout_after(resolved, &swept);
-        start = start_of(&resolved.category_weights, layout.order());
-        at = Likelihood::new(table, &layout, resolved).evaluate(&start, Order::Information)?;
-    }
-    if at.not_finite > 0 {
-        return Err(FitError::NotFinite { rows: at.not_finite });
-    }
-    match maximise(&mut Likelihood::new(table, &layout, resolved), start, at, watch) {
+    let layout = layout_after(resolved, &swept);
+    let mut passes = 0;
+    let mut counted = |number: u64, iterate| {
+        passes = number + 1;
+        watch(number, iterate);
+    };
+    let start = match near_optimum(table, resolved, &layout, products.as_ref(), &mut counted)? {
+        Some(near) => near,
+        None => start_of(&resolved.category_weights, layout.order()),
+    };
+    let at = Likelihood::new(table, &layout, resolved).evaluate(&start, Order::Information)?;
+    let mut watch_on = |number, iterate| watch(passes + number, iterate);
+    match maximise(&mut Likelihood::new(table, &layout, resolved), start, at, &mut watch_on) {
         Ok(optimum) => {
             let (log_likelihood, method) = (optimum.at.value, Method::MaximumLikelihood);
             Ok(Solution { layout, swept, optimum, products, log_likelihood, method })
         }
-        Err(stopped) => Err(explain(resolved, &layout, stopped)),
+        Err(stopped) => Err(diagnose(table, resolved, &layout, stopped)?),
     }
 }
 
@@ -94,12 +94,22 @@ pub(crate) fn layout_after(resolved: &Resolved, swept: &Sweep) -> Layout {
     Layout::new(&resolved.design, &resolved.scaling, &keep)
 }
 
-/// Cross-products of all terms, up to a factor, in design order.
-pub(crate) fn products_at_start(table: &mut Table, resolved: &Resolved) -> Result<Mat<f64>, FitError> {
+/// Weighted cross-products of all terms, in design order.
+pub(crate) fn cross_products(table: &mut Table, resolved: &Resolved) -> Result<Mat<f64>, FitError> {
     check_size(resolved)?;
     let layout = Layout::new(&resolved.design, &resolved.scaling, &vec![true; resolved.design.terms().len()]);
+    let found = table.reduce(|chunk| {
+        let mut products = CrossProducts::new(&layout, 1);
+        add_weighted_products(&mut products, &layout, chunk);
+        products
+    })?;
+    let products = found.map_or_else(Mat::new, |products| in_design_order(&layout, &products.matrix(0)));
+    if products.norm_max().is_finite() {
+        return Ok(products);
+    }
     let start = start_of(&resolved.category_weights, layout.order());
-    Ok(Likelihood::new(table, &layout, resolved).evaluate_with_products(&start)?.1)
+    let rows = Likelihood::new(table, &layout, resolved).evaluate(&start, Order::Value)?.not_finite;
+    Err(FitError::NotFinite { rows })
 }
 
 fn check_size(resolved: &Resolved) -> Result<(), FitError> {
@@ -110,21 +120,6 @@ fn check_size(resolved: &Resolved) -> Result<(), FitError> {
         return Err(FitError::TooLarge { coefficients, terms, compared, most });
     }
     Ok(())
-}
-
-pub(crate) fn explain(resolved: &Resolved, layout: &Layout, stopped: Stopped) -> FitError {
-    match stopped {
-        Stopped::Failed(error) => error,
-        Stopped::Separated { direction, .. } => {
-            FitError::Separated(Box::new(SeparationReport::new(resolved, layout.order(), &direction)))
-        }
-        Stopped::NotPositive { row, steps } => {
-            let term = &resolved.design.terms()[layout.order()[row % layout.terms()]].name;
-            let category = resolved.category_names()[1 + row / layout.terms()];
-            FitError::NotUnique { iterations: steps, terms: format!("`{term}` of category `{category}`") }
-        }
-        Stopped::NotConverged { decrement, steps } => FitError::NotConverged { iterations: steps, decrement },
-    }
 }
 
 /// Fits a part of the terms, starting near the optimum of all of them.
@@ -211,86 +206,4 @@ fn in_design_order(layout: &Layout, products: &Mat<f64>) -> Mat<f64> {
         internal[term] = index;
     }
     Mat::from_fn(size, size, |row, column| products[(internal[row], internal[column])])
-}
-
-/// The log-likelihood of the rows of a table.
-pub(crate) struct Likelihood<'s, 'a> {
-    table: &'s mut Table<'a>,
-    layout: &'s Layout,
-    compared: usize,
-    weight: f64,
-    /// What the rows are changed to before they are summed.
-    view: Option<&'s View<'s>>,
-}
-
-/// Makes other rows of a chunk: a part of them, or with other categories.
-pub(crate) type View<'v> = dyn Fn(&Chunk) -> Chunk + Sync + 'v;
-
-impl<'s, 'a> Likelihood<'s, 'a> {
-    pub(crate) fn new(table: &'s mut Table<'a>, layout: &'s Layout, resolved: &Resolved) -> Self {
-        let compared = resolved.category_weights.len() - 1;
-        Self { table, layout, compared, weight: resolved.category_weights.iter().sum(), view: None }
-    }
-
-    /// The likelihood of a view of the rows.
-    pub(crate) fn of_view(
-        table: &'s mut Table<'a>,
-        layout: &'s Layout,
-        category_weights: &[f64],
-        view: &'s View<'s>,
-    ) -> Self {
-        let weight = category_weights.iter().sum();
-        Self { table, layout, compared: category_weights.len() - 1, weight, view: Some(view) }
-    }
-
-    fn sums(&mut self, point: &[f64], order: Order) -> Result<Sums, FitError> {
-        let coefficients = Coefficients::from_vector(point, self.layout.terms(), self.compared);
-        let (layout, view) = (self.layout, self.view);
-        let sums = self.table.reduce(|chunk| {
-            let mut sums = Sums::new(layout, coefficients.compared, order);
-            let seen = view.map_or(Cow::Borrowed(chunk), |view| Cow::Owned(view(chunk)));
-            add_chunk(&mut sums, &mut Workspace::default(), layout, &coefficients, &seen, order);
-            sums
-        })?;
-        Ok(sums.unwrap_or_else(|| Sums::new(layout, self.compared, order)))
-    }
-
-    /// Evaluation with intercepts only: then the probabilities are the same in all rows, and the
-    /// sum over pairs of categories is proportional to the cross-products of the terms, which are
-    /// returned in the order of the design.
-    fn evaluate_with_products(&mut self, start: &[f64]) -> Result<(Evaluation, Mat<f64>), FitError> {
-        let sums = self.sums(start, Order::Information)?;
-        let products = in_design_order(self.layout, &sums.all_pairs());
-        Ok((evaluation(&sums, Order::Information), products))
-    }
-}
-
-fn evaluation(sums: &Sums, order: Order) -> Evaluation {
-    Evaluation {
-        value: sums.log_likelihood(),
-        gradient: if order >= Order::Gradient { sums.gradient() } else { Vec::new() },
-        information: if order >= Order::Information { sums.information() } else { Mat::new() },
-        longest_row: sums.longest_row(),
-        not_finite: sums.not_finite,
-    }
-}
-
-impl Objective for Likelihood<'_, '_> {
-    fn evaluate(&mut self, point: &[f64], order: Order) -> Result<Evaluation, FitError> {
-        Ok(evaluation(&self.sums(point, order)?, order))
-    }
-
-    fn separates(&mut self, direction: &[f64]) -> Result<bool, FitError> {
-        let direction = Coefficients::from_vector(direction, self.layout.terms(), self.compared);
-        let (layout, view) = (self.layout, self.view);
-        let margins = self.table.reduce(|chunk| {
-            let seen = view.map_or(Cow::Borrowed(chunk), |view| Cow::Owned(view(chunk)));
-            Margins::of(layout, &direction, &seen)
-        })?;
-        Ok(margins.is_some_and(Margins::separate))
-    }
-
-    fn weight(&self) -> f64 {
-        self.weight
-    }
 }

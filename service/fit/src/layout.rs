@@ -8,13 +8,16 @@
 use kilter_model::{DenseColumn, Design, Field, Form, Term};
 
 use crate::chunk::Chunk;
-use crate::survey::Moments;
+use crate::moments::Moments;
 use crate::vector::Standardise;
 
 /// Rows per block: small enough that a block of columns stays in the processor's cache.
-pub(crate) const BLOCK_ROWS: usize = 256;
+pub(crate) const BLOCK_ROWS: usize = 512;
 /// No term of a group applies.
 const NO_TERM: u32 = u32::MAX;
+
+/// Smaller scales are taken as this one, so that their reciprocals are numbers.
+const SMALLEST_SCALE: f64 = 1e-300;
 
 /// Centre and scale of each dense column of a design.
 #[derive(Debug, Clone, PartialEq)]
@@ -33,7 +36,11 @@ impl Scaling {
             DenseColumn::Basis { field, basis } => {
                 let moments = &moments[field][basis];
                 let constant = moments.least >= moments.most;
-                if constant { (moments.least, 1.0) } else { (moments.mean, moments.deviation()) }
+                if constant {
+                    (moments.least, 1.0)
+                } else {
+                    (moments.mean, moments.deviation().max(SMALLEST_SCALE))
+                }
             }
             DenseColumn::MissingFlag { .. } | DenseColumn::Flag { .. } => (0.0, 1.0),
         };
@@ -63,6 +70,8 @@ pub(crate) struct Layout {
     groups: Vec<Group>,
     /// Index of each term in the design, by internal index.
     order: Vec<usize>,
+    /// Whether some term is a product, so that the columns are needed beside the terms.
+    needs_columns: bool,
 }
 
 /// Rows of a chunk under a layout.
@@ -120,6 +129,7 @@ impl Layout {
             dense_terms: Vec::new(),
             groups: Vec::new(),
             order: Vec::new(),
+            needs_columns: kept().any(|(_, term)| term.dense.len() + term.levels.len() > 1),
         };
         for (index, term) in kept().filter(|(_, term)| term.levels.is_empty()) {
             layout.dense_terms.push(term.dense.clone());
@@ -178,15 +188,21 @@ impl Layout {
 
     /// Fills a block with the rows `start..end` of a chunk.
     pub(crate) fn fill(&self, chunk: &Chunk, start: usize, end: usize, block: &mut Block) {
-        block.rows = end - start;
-        self.fill_columns(chunk, start, end, &mut block.columns);
-        let rows = block.rows;
-        block.dense.clear();
-        for columns in &self.dense_terms {
+        let rows = end - start;
+        block.rows = rows;
+        if self.needs_columns {
+            self.fill_columns(chunk, start, end, &mut block.columns);
+        }
+        block.dense.resize(self.dense_terms() * rows, 0.0);
+        for (columns, slots) in self.dense_terms.iter().zip(block.dense.chunks_exact_mut(rows)) {
             match columns[..] {
-                [] => block.dense.extend(std::iter::repeat_n(1.0, rows)),
-                [column] => block.dense.extend_from_slice(&block.columns[column * rows..][..rows]),
-                _ => block.dense.extend((0..rows).map(|row| product(&block.columns, columns, rows, row))),
+                [] => slots.fill(1.0),
+                [column] => self.fill_column(column, chunk, start, end, slots),
+                _ => {
+                    for (row, slot) in slots.iter_mut().enumerate() {
+                        *slot = product(&block.columns, columns, rows, row);
+                    }
+                }
             }
         }
         self.fill_levels(chunk, start, block, |columns, chosen, row| product(columns, chosen, rows, row));
@@ -286,34 +302,36 @@ impl Layout {
     fn fill_columns(&self, chunk: &Chunk, start: usize, end: usize, columns: &mut Vec<f64>) {
         let rows = end - start;
         columns.resize(self.design.dense().len() * rows, 0.0);
-        for (index, (column, slots)) in
-            self.design.dense().iter().zip(columns.chunks_exact_mut(rows)).enumerate()
-        {
-            let (centre, scale) = (self.scaling.centre[index], self.scaling.scale[index]);
-            match *column {
-                DenseColumn::Basis { field, basis } => {
-                    let Field::Number(number) = &self.design.fields()[field] else { continue };
-                    let values = &chunk.numbers(field)[start..end];
-                    if number.form == Form::AsIs {
-                        Standardise { values, centre, scale, column: slots }.run();
-                        continue;
-                    }
-                    for (slot, &value) in slots.iter_mut().zip(values) {
-                        // A missing number takes the mean of the column, which is 0 here.
-                        *slot = if value.is_nan() {
-                            0.0
-                        } else {
-                            (number.form.column(basis, value) - centre) / scale
-                        };
-                    }
+        for (index, slots) in columns.chunks_exact_mut(rows).enumerate() {
+            self.fill_column(index, chunk, start, end, slots);
+        }
+    }
+
+    /// One standardised dense column.
+    fn fill_column(&self, index: usize, chunk: &Chunk, start: usize, end: usize, slots: &mut [f64]) {
+        let (centre, factor) = (self.scaling.centre[index], self.scaling.scale[index].recip());
+        match self.design.dense()[index] {
+            DenseColumn::Basis { field, basis } => {
+                let Field::Number(number) = &self.design.fields()[field] else { return };
+                let values = &chunk.numbers(field)[start..end];
+                if number.form == Form::AsIs {
+                    return Standardise { values, centre, factor, column: slots }.run();
                 }
-                DenseColumn::MissingFlag { field } => {
-                    for (slot, value) in slots.iter_mut().zip(&chunk.numbers(field)[start..end]) {
-                        *slot = f64::from(u8::from(value.is_nan()));
-                    }
+                for (slot, &value) in slots.iter_mut().zip(values) {
+                    // A missing number takes the mean of the column, which is 0 here.
+                    *slot = if value.is_nan() {
+                        0.0
+                    } else {
+                        (number.form.column(basis, value) - centre) * factor
+                    };
                 }
-                DenseColumn::Flag { field } => slots.copy_from_slice(&chunk.numbers(field)[start..end]),
             }
+            DenseColumn::MissingFlag { field } => {
+                for (slot, value) in slots.iter_mut().zip(&chunk.numbers(field)[start..end]) {
+                    *slot = f64::from(u8::from(value.is_nan()));
+                }
+            }
+            DenseColumn::Flag { field } => slots.copy_from_slice(&chunk.numbers(field)[start..end]),
         }
     }
 }

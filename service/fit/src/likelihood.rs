@@ -131,17 +131,6 @@ impl Sums {
         }
         information
     }
-
-    /// The sum of the cross-products of all pairs.
-    pub(crate) fn all_pairs(&self) -> Mat<f64> {
-        let mut sum = Mat::zeros(self.terms, self.terms);
-        if let Some(products) = &self.pairs {
-            for pair in 0..products.count() {
-                sum += products.matrix(pair);
-            }
-        }
-        sum
-    }
 }
 
 /// Scratch space of one thread.
@@ -156,10 +145,15 @@ pub(crate) struct Workspace {
     residuals: Vec<f64>,
     log_probability: Vec<f64>,
     weights: Weights,
-    scratch: [Vec<f64>; 2],
+    scratch: [Vec<f64>; 3],
 }
 
 impl Workspace {
+    /// The block filled last.
+    pub(crate) fn block(&self) -> &Block {
+        &self.block
+    }
+
     /// Fills the block and its log-odds, m columns.
     pub(crate) fn log_odds(
         &mut self,
@@ -179,8 +173,9 @@ impl Workspace {
     fn probabilities(&mut self, category: &[u32], weight: &[f64]) {
         let rows = category.len();
         self.residuals.resize(self.odds.len(), 0.0);
-        let [largest, others] = &mut self.scratch;
-        for column in [&mut self.reference, &mut self.log_probability, &mut *largest, &mut *others] {
+        let [largest, others, sum] = &mut self.scratch;
+        for column in [&mut self.reference, &mut self.log_probability, &mut *largest, &mut *others, &mut *sum]
+        {
             column.resize(rows, 0.0);
         }
         Softmax {
@@ -192,6 +187,7 @@ impl Workspace {
             log_probability: &mut self.log_probability,
             largest,
             others,
+            sum,
         }
         .run();
     }
@@ -292,6 +288,17 @@ pub(crate) fn add_chunk(
         if order >= Order::Information {
             work.add_information(sums, weight);
         }
+    }
+}
+
+/// Adds to cross-products those of the terms, each row by its weight.
+pub(crate) fn add_weighted_products(products: &mut CrossProducts, layout: &Layout, chunk: &Chunk) {
+    let mut work = Workspace::default();
+    for start in (0..chunk.rows()).step_by(BLOCK_ROWS) {
+        let end = (start + BLOCK_ROWS).min(chunk.rows());
+        layout.fill(chunk, start, end, &mut work.block);
+        work.weights.begin(end - start, 1).copy_from_slice(&chunk.weight[start..end]);
+        products.add(&work.block, &mut work.weights);
     }
 }
 

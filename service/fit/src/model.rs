@@ -10,7 +10,7 @@ use kilter_model::{
 };
 
 use crate::estimate::{Method, Solution};
-use crate::newton::Optimum;
+use crate::newton::largest_spread;
 use crate::plan::Plan;
 use crate::raw::BackTransform;
 use crate::reader::ReadStatistics;
@@ -89,7 +89,7 @@ fn figures(outcomes: &Outcomes, solution: &Solution) -> FitFigures {
         gradient_norm: optimum.at.gradient.iter().map(|g| g * g).sum::<f64>().sqrt(),
         newton_decrement: optimum.decrement,
         iterations: optimum.steps,
-        certificate: certificate(optimum, resolved.category_weights.len() - 1),
+        certificate: optimum.decrement * largest_spread(optimum.covariance.as_ref(), optimum.at.longest_row),
         standard_errors: plan.fit.standard_errors,
         ridge,
         aic: -2.0 * log_likelihood + 2.0 * parameters,
@@ -119,20 +119,4 @@ fn in_model_order(resolved: &Resolved) -> Vec<f64> {
         position.map_or(0.0, |position| resolved.category_weights[position])
     };
     resolved.outcome.categories.iter().map(weight).collect()
-}
-
-/// The Newton decrement times a bound for the largest standard deviation, over all rows, of a
-/// difference of two log-odds. Below 1 the maximum exists and is unique, because the third
-/// derivative along any line is bounded by that standard deviation times the second
-/// (self-concordance, Bach 2010).
-///
-/// The bound is twice the longest row times the root of the largest Frobenius norm of a category's
-/// covariance block.
-fn certificate(optimum: &Optimum, compared: usize) -> f64 {
-    let terms = optimum.point.len() / compared;
-    let norm = |category: usize| {
-        optimum.covariance.submatrix(category * terms, category * terms, terms, terms).norm_l2()
-    };
-    let largest = (0..compared).map(norm).fold(0.0, f64::max);
-    optimum.decrement * 2.0 * optimum.at.longest_row * largest.sqrt()
 }

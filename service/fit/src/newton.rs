@@ -14,8 +14,11 @@ use crate::linear::{Factor, dot};
 /// Stop when the decrement is below this, and take the last step all the same: its error is of the
 /// order of the decrement squared.
 const CLOSE: f64 = 1e-6;
-/// The same where a few digits are enough.
-const NEAR: f64 = 1e-4;
+/// Relative error of the information that is small enough where evaluations are slow: standard
+/// errors are then right to six digits.
+pub(crate) const EXACT: f64 = 2e-6;
+/// Further away the inverse of the information is not worth computing to see how near it is.
+const WITHIN_REACH: f64 = 0.01;
 /// Largest number of steps.
 const MOST_STEPS: u64 = 50;
 /// Share of the gain expected from a step that it must reach (Armijo).
@@ -34,11 +37,16 @@ pub(crate) trait Objective {
     /// Value, gradient and information (the negative second derivatives) as far as `order` asks.
     fn evaluate(&mut self, point: &[f64], order: Order) -> Result<Evaluation, FitError>;
 
-    /// Whether going on in this direction separates categories, so that there is no maximum.
-    fn separates(&mut self, direction: &[f64]) -> Result<bool, FitError>;
+    /// Whether going on in this direction separates categories, so that there is no maximum:
+    /// `Some(true)` where it separates all of them completely.
+    fn separates(&mut self, direction: &[f64]) -> Result<Option<bool>, FitError>;
 
     /// Sum of the weights, the scale of value and gradient.
     fn weight(&self) -> f64;
+
+    /// Whether an evaluation takes so long that the information is not worth another one for its
+    /// last digits.
+    fn is_slow(&self) -> bool;
 }
 
 /// A function at a point.
@@ -78,15 +86,18 @@ pub(crate) enum Stopped {
     /// The function grows for ever in this direction.
     Separated {
         direction: Vec<f64>,
+        complete: Option<bool>,
     },
     /// The information is singular in this row.
     NotPositive {
         row: usize,
         steps: u64,
+        point: Vec<f64>,
     },
     NotConverged {
         decrement: f64,
         steps: u64,
+        point: Vec<f64>,
     },
 }
 
@@ -104,12 +115,23 @@ struct Step {
 }
 
 impl Step {
-    fn at(evaluation: &Evaluation, steps: u64) -> Result<Self, Stopped> {
-        let factor = Factor::new(evaluation.information.as_ref())
-            .map_err(|error| Stopped::NotPositive { row: error.row, steps })?;
+    fn at(evaluation: &Evaluation, point: &[f64], steps: u64) -> Result<Self, Stopped> {
+        let factor = Factor::new(evaluation.information.as_ref()).map_err(|error| Stopped::NotPositive {
+            row: error.row,
+            steps,
+            point: point.to_vec(),
+        })?;
         let direction = factor.solve(&evaluation.gradient);
         let decrement = dot(&evaluation.gradient, &direction).max(0.0).sqrt();
         Ok(Self { factor, direction, decrement })
+    }
+
+    /// Whether the information changes by less than [`EXACT`], relatively, on the way to the
+    /// optimum.
+    fn is_exact_enough(&self, at: &Evaluation) -> bool {
+        let within_reach = self.decrement <= WITHIN_REACH;
+        within_reach
+            && self.decrement * largest_spread(self.factor.inverse().as_ref(), at.longest_row) <= EXACT
     }
 }
 
@@ -124,19 +146,21 @@ pub(crate) fn maximise(
     finish(objective, near, watch)
 }
 
-/// The maximum to about the square of [`NEAR`], without derivatives there.
+/// The maximum to about the square of `close`, in standard errors, without derivatives there.
 pub(crate) fn approach(
     objective: &mut dyn Objective,
     point: Vec<f64>,
     at: Evaluation,
+    close: f64,
 ) -> Result<Vec<f64>, Stopped> {
-    let near = climb(objective, point, at, NEAR, &mut |_, _| {})?;
+    let near = climb(objective, point, at, close, &mut |_, _| {})?;
     Ok(moved(&near.point, &near.step.direction, 1.0))
 }
 
 /// A point so near the maximum that the next step may be taken without looking.
 struct Near {
     point: Vec<f64>,
+    at: Evaluation,
     step: Step,
     steps: u64,
 }
@@ -150,21 +174,23 @@ fn climb(
 ) -> Result<Near, Stopped> {
     let mut before = f64::INFINITY;
     for steps in 0..=MOST_STEPS {
-        let step = Step::at(&at, steps)?;
+        let step = Step::at(&at, &point, steps)?;
         watch(steps, Iterate { value: at.value, decrement: step.decrement });
-        if step.decrement <= close {
-            return Ok(Near { point, step, steps });
+        if step.decrement <= close || (objective.is_slow() && step.is_exact_enough(&at)) {
+            return Ok(Near { point, at, step, steps });
         }
         let ratio = (step.decrement / before).powi(2);
         let suspicious = steps >= 5 && step.decrement < 1.0 && (0.25..0.75).contains(&ratio);
-        if suspicious && objective.separates(&step.direction)? {
-            return Err(Stopped::Separated { direction: step.direction });
+        if suspicious && let Some(all) = objective.separates(&step.direction)? {
+            return Err(Stopped::Separated { direction: step.direction, complete: all.then_some(true) });
         }
         before = step.decrement;
-        (point, at) = advance(objective, &point, &at, &step)?
-            .ok_or(Stopped::NotConverged { decrement: step.decrement, steps })?;
+        match advance(objective, &point, &at, &step)? {
+            Some(next) => (point, at) = next,
+            None => return Err(Stopped::NotConverged { decrement: step.decrement, steps, point }),
+        }
     }
-    Err(Stopped::NotConverged { decrement: before, steps: MOST_STEPS })
+    Err(Stopped::NotConverged { decrement: before, steps: MOST_STEPS, point })
 }
 
 /// The last steps, taken without looking at the value, until the gradient is flat.
@@ -173,23 +199,39 @@ fn finish(
     near: Near,
     watch: &mut dyn FnMut(u64, Iterate),
 ) -> Result<Optimum, Stopped> {
-    let Near { mut point, mut step, mut steps } = near;
+    let Near { mut point, mut at, mut step, mut steps } = near;
     let flat = FLAT * objective.weight();
-    for _ in 0..LAST_STEPS {
+    for round in 0..LAST_STEPS {
         point = moved(&point, &step.direction, 1.0);
-        let at = objective.evaluate(&point, Order::Information)?;
         steps += 1;
-        step = Step::at(&at, steps)?;
+        if round == 0 && objective.is_slow() {
+            // The information changes by less than is asked for.
+            let there = objective.evaluate(&point, Order::Gradient)?;
+            at = Evaluation { information: at.information, longest_row: at.longest_row, ..there };
+        } else {
+            at = objective.evaluate(&point, Order::Information)?;
+        }
+        step = Step::at(&at, &point, steps)?;
         watch(steps, Iterate { value: at.value, decrement: step.decrement });
         if dot(&at.gradient, &at.gradient).sqrt() <= flat {
             let covariance = step.factor.inverse();
             return Ok(Optimum { point, at, covariance, decrement: step.decrement, steps });
         }
     }
-    Err(Stopped::NotConverged { decrement: step.decrement, steps })
+    Err(Stopped::NotConverged { decrement: step.decrement, steps, point })
 }
 
-fn moved(point: &[f64], direction: &[f64], length: f64) -> Vec<f64> {
+/// A bound for the largest standard deviation, over all rows, of a difference of two log-odds:
+/// twice the longest row times the root of the Frobenius norm of the covariance.
+///
+/// Times the Newton decrement it bounds how much the information changes on the way to the optimum
+/// (self-concordance, Bach 2010): relatively by no more than about that product, and if it is
+/// below 1 the optimum exists and is unique.
+pub(crate) fn largest_spread(covariance: MatRef<'_, f64>, longest_row: f64) -> f64 {
+    2.0 * longest_row * covariance.norm_l2().sqrt()
+}
+
+pub(crate) fn moved(point: &[f64], direction: &[f64], length: f64) -> Vec<f64> {
     point.iter().zip(direction).map(|(at, step)| at + length * step).collect()
 }
 

@@ -100,6 +100,13 @@ impl BackTransform {
         (Self { map }, left_out)
     }
 
+    /// For each plain term the size of what standardised coefficients can make of it.
+    pub(crate) fn reach(&self) -> Vec<f64> {
+        let size =
+            |row: usize| (0..self.map.ncols()).map(|column| self.map[(row, column)].powi(2)).sum::<f64>();
+        (0..self.map.nrows()).map(|row| size(row).sqrt()).collect()
+    }
+
     /// Plain coefficients, category by category.
     pub(crate) fn coefficients(&self, standardised: &[f64]) -> Vec<Vec<f64>> {
         let row =

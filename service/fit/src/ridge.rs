@@ -11,10 +11,11 @@ use faer::{Mat, MatRef};
 use kilter_model::{DenseColumn, Field};
 
 use crate::error::FitError;
-use crate::estimate::{Likelihood, Method, Solution, products_at_start, start_of};
+use crate::estimate::{Method, Solution, cross_products, start_of};
 use crate::layout::Layout;
 use crate::likelihood::Order;
 use crate::newton::{Evaluation, Iterate, Objective, maximise};
+use crate::objective::Likelihood;
 use crate::resolve::Resolved;
 use crate::table::Table;
 
@@ -35,6 +36,21 @@ impl Penalty {
             let same = f64::from(u8::from(row / terms == column / terms));
             (same - 1.0 / categories) * shape[(row % terms, column % terms)]
         });
+        Self { matrix }
+    }
+
+    /// The plain sum of squares of all coefficients but the intercepts.
+    pub(crate) fn on_slopes(layout: &Layout, compared: usize) -> Self {
+        let terms = layout.terms();
+        let counts = |index: usize| f64::from(u8::from(layout.order()[index % terms] > 0));
+        let matrix =
+            Mat::from_fn(
+                terms * compared,
+                terms * compared,
+                |row, column| {
+                    if row == column { counts(row) } else { 0.0 }
+                },
+            );
         Self { matrix }
     }
 
@@ -79,25 +95,27 @@ fn shape(resolved: &Resolved, layout: &Layout, products: MatRef<'_, f64>) -> Mat
 pub(crate) struct Penalised<'s, 'a> {
     pub(crate) likelihood: Likelihood<'s, 'a>,
     pub(crate) penalty: &'s Penalty,
-    pub(crate) rho: f64,
+    /// `rho W`.
+    pub(crate) strength: f64,
 }
 
-impl Penalised<'_, '_> {
-    fn strength(&self) -> f64 {
-        self.rho * self.likelihood.weight()
+impl<'s, 'a> Penalised<'s, 'a> {
+    /// With penalty rho per case.
+    pub(crate) fn new(likelihood: Likelihood<'s, 'a>, penalty: &'s Penalty, rho: f64) -> Self {
+        let strength = rho * likelihood.weight();
+        Self { likelihood, penalty, strength }
     }
 
     /// What is taken off the log-likelihood.
     fn cost(&self, point: &[f64]) -> f64 {
-        0.5 * crate::linear::dot(point, &self.penalty.times(point, self.strength()))
+        0.5 * crate::linear::dot(point, &self.penalty.times(point, self.strength))
     }
 }
 
 impl Objective for Penalised<'_, '_> {
     fn evaluate(&mut self, point: &[f64], order: Order) -> Result<Evaluation, FitError> {
         let mut at = self.likelihood.evaluate(point, order)?;
-        let strength = self.strength();
-        let pull = self.penalty.times(point, strength);
+        let pull = self.penalty.times(point, self.strength);
         at.value -= 0.5 * crate::linear::dot(point, &pull);
         if order >= Order::Gradient {
             for (slope, pull) in at.gradient.iter_mut().zip(&pull) {
@@ -105,18 +123,22 @@ impl Objective for Penalised<'_, '_> {
             }
         }
         if order >= Order::Information {
-            at.information += &self.penalty.matrix * faer::Scale(strength);
+            at.information += &self.penalty.matrix * faer::Scale(self.strength);
         }
         Ok(at)
     }
 
-    fn separates(&mut self, _: &[f64]) -> Result<bool, FitError> {
+    fn separates(&mut self, _: &[f64]) -> Result<Option<bool>, FitError> {
         // A penalised likelihood has a maximum whatever the data.
-        Ok(false)
+        Ok(None)
     }
 
     fn weight(&self) -> f64 {
         self.likelihood.weight()
+    }
+
+    fn is_slow(&self) -> bool {
+        self.likelihood.is_slow()
     }
 }
 
@@ -125,7 +147,7 @@ pub(crate) fn penalised_layout(
     table: &mut Table,
     resolved: &Resolved,
 ) -> Result<(Layout, Penalty, Mat<f64>), FitError> {
-    let products = products_at_start(table, resolved)?;
+    let products = cross_products(table, resolved)?;
     let keep: Vec<bool> = (0..products.nrows()).map(|term| products[(term, term)] > 0.0).collect();
     let layout = Layout::new(&resolved.design, &resolved.scaling, &keep);
     let penalty = Penalty::new(resolved, &layout, products.as_ref());
@@ -141,16 +163,15 @@ pub(crate) fn estimate_ridge(
 ) -> Result<Solution, FitError> {
     let (layout, penalty, products) = penalised_layout(table, resolved)?;
     let start = start_of(&resolved.category_weights, layout.order());
-    let mut objective =
-        Penalised { likelihood: Likelihood::new(table, &layout, resolved), penalty: &penalty, rho };
+    let mut objective = Penalised::new(Likelihood::new(table, &layout, resolved), &penalty, rho);
     let at = objective.evaluate(&start, Order::Information)?;
     if at.not_finite > 0 {
         return Err(FitError::NotFinite { rows: at.not_finite });
     }
     let optimum = maximise(&mut objective, start, at, watch)
-        .map_err(|stopped| crate::estimate::explain(resolved, &layout, stopped))?;
+        .map_err(|stopped| crate::trouble::explain(resolved, &layout, stopped))?;
     let cost = objective.cost(&optimum.point);
-    let strength = objective.strength();
+    let strength = objective.strength;
     let unpenalised = &optimum.at.information - &penalty.matrix * faer::Scale(strength);
     // tr[(I + P)^-1 I], coefficient by coefficient.
     let kept = &optimum.covariance * &unpenalised;

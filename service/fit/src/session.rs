@@ -17,10 +17,12 @@ use crate::raw::{BackTransform, describe};
 use crate::reader::{ReadStatistics, Reader};
 use crate::resolve::{Resolved, resolve};
 use crate::ridge::estimate_ridge;
+use crate::separation::SeparationReport;
 use crate::source::RowSource;
 use crate::split::Split;
 use crate::survey::{Survey, Surveyor};
 use crate::table::{Rows, Table, last_fitted_time, read_chunks};
+use crate::trouble::{Decision, check_separation};
 
 /// How a fit may use the machine.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -48,7 +50,7 @@ pub enum Progress {
         /// Rows of the fit so far.
         rows: u64,
     },
-    /// A Newton step begins.
+    /// A step of the optimiser begins.
     Step {
         /// Number of the step, counted from 0.
         number: u64,
@@ -102,13 +104,19 @@ impl<'a> Session<'a> {
         let mut surveyor = Surveyor::new(plan);
         let mut keeper = Keeper { chunks: Some(Vec::new()), bytes: 0, allowance: settings.keep_bytes };
         let mut rows_so_far = 0;
+        let mut window = Vec::with_capacity(settings.threads);
         read_chunks(rows, &mut reader, &mut |chunk| {
             rows_so_far += chunk.rows() as u64;
-            surveyor.add(&chunk);
-            keeper.keep(chunk);
+            window.push(chunk);
+            if window.len() >= settings.threads {
+                surveyor.add(&window);
+                keeper.keep(&mut window);
+            }
             progress(Progress::Surveying { rows: rows_so_far });
             Ok(())
         })?;
+        surveyor.add(&window);
+        keeper.keep(&mut window);
         let statistics = reader.statistics().clone();
         let clusters = surveyor.clusters();
         let (survey, samples) = surveyor.finish();
@@ -117,14 +125,15 @@ impl<'a> Session<'a> {
         if statistics.fractional_counts {
             resolved.warnings.push("some counts are no whole numbers; they are used as they are".to_owned());
         }
-        let table = Table::new(
-            rows,
-            reader,
-            resolved.relabel.clone(),
-            keeper.chunks,
-            settings.threads,
-            survey.total.rows,
-        );
+        let table = if let Some(mut chunks) = keeper.chunks {
+            for chunk in &mut chunks {
+                resolved.relabel.apply(chunk);
+            }
+            Table::in_memory(chunks, settings.threads)
+        } else {
+            let relabel = resolved.relabel.clone();
+            Table::at_source(rows, reader, relabel, settings.threads, survey.total.rows)
+        };
         Ok(Self { plan: plan.clone(), split, table, survey, resolved, statistics, clusters })
     }
 
@@ -164,6 +173,21 @@ impl<'a> Session<'a> {
         let fitted = self.fitted(&solution, &covariance, trace, validation);
         let Self { plan, table, resolved, .. } = self;
         Ok(Analysis { fitted, plan, table, resolved, solution, covariance })
+    }
+
+    /// Decides whether the data separate the categories, so that there is no maximum likelihood
+    /// estimate: by the optimiser, and by linear programme where it finds none. `None` where the
+    /// estimate exists.
+    ///
+    /// # Errors
+    /// [`FitError`] where the rows cannot be read, or the linear programme could not be solved
+    /// well enough to say.
+    pub fn check_separation(&mut self) -> Result<Option<SeparationReport>, FitError> {
+        match check_separation(&mut self.table, &self.resolved)? {
+            Decision::Finite => Ok(None),
+            Decision::Separated(report) => Ok(Some(report)),
+            Decision::Undecided => Err(FitError::Undecided),
+        }
     }
 
     fn covariance(&mut self, solution: &Solution) -> Result<ErrorKind, FitError> {
@@ -323,12 +347,14 @@ struct Keeper {
 }
 
 impl Keeper {
-    fn keep(&mut self, chunk: Chunk) {
-        self.bytes += chunk.bytes();
+    /// Takes chunks over.
+    fn keep(&mut self, taken: &mut Vec<Chunk>) {
+        self.bytes += taken.iter().map(Chunk::bytes).sum::<usize>();
         if self.bytes > self.allowance {
             self.chunks = None;
+            taken.clear();
         } else if let Some(chunks) = &mut self.chunks {
-            chunks.push(chunk);
+            chunks.append(taken);
         }
     }
 }

@@ -5,72 +5,15 @@ use std::collections::{BinaryHeap, HashSet};
 use kilter_model::Form;
 
 use crate::chunk::{Chunk, ChunkColumn};
+use crate::moments::Moments;
 use crate::plan::{FieldPlan, FormPlan, Plan};
 use crate::reduce::{BinaryCounter, Compensated, Merge, add_all};
 use crate::split::draw;
+use crate::table::sum_window;
 
 /// How many values of a spline field are kept to place its knots. Up to this many rows the knots
 /// are exact quantiles; of more rows a random sample is taken.
 const SAMPLE_ROWS: usize = 100_000;
-
-/// Weighted mean and squared deviations of numbers, with their range. Missing numbers are left
-/// out.
-#[derive(Debug, Clone, Copy, PartialEq)]
-pub(crate) struct Moments {
-    pub(crate) weight: f64,
-    pub(crate) mean: f64,
-    /// Weighted sum of squared deviations from the mean.
-    pub(crate) squares: f64,
-    pub(crate) least: f64,
-    pub(crate) most: f64,
-}
-
-impl Default for Moments {
-    fn default() -> Self {
-        Self { weight: 0.0, mean: 0.0, squares: 0.0, least: f64::INFINITY, most: f64::NEG_INFINITY }
-    }
-}
-
-impl Moments {
-    /// In two passes: first the mean, then the deviations from it.
-    pub(crate) fn of(values: impl Iterator<Item = (f64, f64)> + Clone) -> Self {
-        let present = values.filter(|(value, _)| !value.is_nan());
-        let mut moments = Self::default();
-        let mut sum = 0.0;
-        for (value, weight) in present.clone() {
-            moments.weight += weight;
-            sum += weight * value;
-            moments.least = moments.least.min(value);
-            moments.most = moments.most.max(value);
-        }
-        if moments.weight > 0.0 {
-            moments.mean = sum / moments.weight;
-            moments.squares = present.map(|(value, weight)| weight * (value - moments.mean).powi(2)).sum();
-        }
-        moments
-    }
-
-    /// Standard deviation with the sum of weights as divisor; 0 for a constant, exactly.
-    pub(crate) fn deviation(&self) -> f64 {
-        if self.least < self.most { (self.squares / self.weight).sqrt() } else { 0.0 }
-    }
-}
-
-impl Merge for Moments {
-    /// Chan, Golub and LeVeque (1983).
-    fn merge(&mut self, later: Self) {
-        self.least = self.least.min(later.least);
-        self.most = self.most.max(later.most);
-        if later.weight == 0.0 {
-            return;
-        }
-        let weight = self.weight + later.weight;
-        let gap = later.mean - self.mean;
-        self.mean += gap * (later.weight / weight);
-        self.squares += later.squares + gap * gap * (self.weight * later.weight / weight);
-        self.weight = weight;
-    }
-}
 
 /// Rows, cases and weight.
 #[derive(Debug, Clone, Copy, PartialEq, Default)]
@@ -100,14 +43,26 @@ impl Merge for Totals {
     }
 }
 
+/// What is known of a number.
+#[derive(Debug, Clone, PartialEq, Default)]
+pub(crate) struct NumberSurvey {
+    /// The number itself.
+    pub(crate) value: Moments,
+    /// The columns of its form; for a spline of the number only.
+    pub(crate) columns: Vec<Moments>,
+    pub(crate) missing_rows: u64,
+    /// Smallest and largest number with each category.
+    pub(crate) by_category: Vec<[f64; 2]>,
+}
+
 /// What is known of one field.
 #[derive(Debug, Clone, PartialEq)]
 pub(crate) enum FieldSurvey {
-    /// A number: its own moments, those of each column of its form (for a spline of the number
-    /// only), and its range in each category.
-    Number { value: Moments, columns: Vec<Moments>, missing_rows: u64, by_category: Vec<[f64; 2]> },
+    Number(NumberSurvey),
     /// Levels, or false and true of a flag: cases by level and category.
-    Levels { cases: Vec<Vec<f64>> },
+    Levels {
+        cases: Vec<Vec<f64>>,
+    },
 }
 
 /// What is known of all rows of the fit. Categories and levels go by their first numbers.
@@ -135,6 +90,14 @@ impl Survey {
         });
         Self { total, fields: fields.collect(), categories }
     }
+
+    /// What is known of a number; nothing of a field that is none.
+    pub(crate) fn number(&self, field: usize) -> NumberSurvey {
+        match &self.fields[field] {
+            FieldSurvey::Number(number) => number.clone(),
+            FieldSurvey::Levels { .. } => NumberSurvey::default(),
+        }
+    }
 }
 
 impl Merge for Survey {
@@ -149,22 +112,23 @@ impl Merge for Survey {
     }
 }
 
+impl Merge for NumberSurvey {
+    fn merge(&mut self, later: Self) {
+        self.value.merge(later.value);
+        for (column, later) in self.columns.iter_mut().zip(later.columns) {
+            column.merge(later);
+        }
+        self.missing_rows += later.missing_rows;
+        for (category, [low, high]) in later.by_category.into_iter().enumerate() {
+            extend(range_slot(&mut self.by_category, category as u32), low, high);
+        }
+    }
+}
+
 impl Merge for FieldSurvey {
     fn merge(&mut self, later: Self) {
         match (self, later) {
-            (
-                Self::Number { value, columns, missing_rows, by_category },
-                Self::Number { value: value_, columns: columns_, missing_rows: missing_, by_category: by_ },
-            ) => {
-                value.merge(value_);
-                for (column, other) in columns.iter_mut().zip(columns_) {
-                    column.merge(other);
-                }
-                *missing_rows += missing_;
-                for (category, [low, high]) in by_.into_iter().enumerate() {
-                    extend(range_slot(by_category, category as u32), low, high);
-                }
-            }
+            (Self::Number(number), Self::Number(later)) => number.merge(later),
             (Self::Levels { cases }, Self::Levels { cases: later }) => {
                 for (level, by_category) in later.into_iter().enumerate() {
                     let sums = slot(cases, level as u32);
@@ -199,21 +163,24 @@ fn extend(range: &mut [f64; 2], low: f64, high: f64) {
 
 fn survey_number(chunk: &Chunk, numbers: &[f64], form: &Form) -> FieldSurvey {
     let weighted = numbers.iter().copied().zip(chunk.weight.iter().copied());
-    let columns = (0..form.columns()).map(|basis| {
-        Moments::of(weighted.clone().map(move |(number, weight)| (form.column(basis, number), weight)))
-    });
-    let mut by_category = Vec::new();
+    let value = Moments::of(weighted.clone());
+    let column = |basis| match form {
+        Form::AsIs => value,
+        _ => Moments::of(weighted.clone().map(move |(number, weight)| (form.column(basis, number), weight))),
+    };
+    let categories = chunk.category.iter().max().map_or(0, |last| *last as usize + 1);
+    let mut by_category = vec![[f64::INFINITY, f64::NEG_INFINITY]; categories];
     for (&number, &category) in numbers.iter().zip(&chunk.category) {
         if !number.is_nan() {
-            extend(range_slot(&mut by_category, category), number, number);
+            extend(&mut by_category[category as usize], number, number);
         }
     }
-    FieldSurvey::Number {
-        columns: columns.collect(),
-        value: Moments::of(weighted),
+    FieldSurvey::Number(NumberSurvey {
+        columns: (0..form.columns()).map(column).collect(),
+        value,
         missing_rows: numbers.iter().filter(|number| number.is_nan()).count() as u64,
         by_category,
-    }
+    })
 }
 
 fn survey_levels(chunk: &Chunk, levels: impl Iterator<Item = u32>) -> FieldSurvey {
@@ -310,7 +277,16 @@ impl Surveyor {
         }
     }
 
-    pub(crate) fn add(&mut self, chunk: &Chunk) {
+    /// Surveys the next chunks, each on its own thread.
+    pub(crate) fn add(&mut self, chunks: &[Chunk]) {
+        for chunk in chunks {
+            self.sample(chunk);
+        }
+        let forms = &self.forms;
+        sum_window(chunks, &|chunk: &Chunk| Survey::of(chunk, forms), &mut self.sums);
+    }
+
+    fn sample(&mut self, chunk: &Chunk) {
         for (field, sample) in self.samples.iter_mut().enumerate() {
             let Some(sample) = sample else { continue };
             for (row, &value) in chunk.numbers(field).iter().enumerate().filter(|(_, value)| !value.is_nan())
@@ -321,7 +297,6 @@ impl Surveyor {
         }
         self.rows += chunk.rows() as u64;
         self.clusters.extend(&chunk.cluster);
-        self.sums.push(Survey::of(chunk, &self.forms));
     }
 
     /// Number of clusters so far.
@@ -332,43 +307,5 @@ impl Surveyor {
     /// The survey, `None` where there was no row, and the samples of spline fields.
     pub(crate) fn finish(self) -> (Option<Survey>, Vec<Option<Sample>>) {
         (self.sums.finish(), self.samples)
-    }
-}
-
-#[cfg(test)]
-mod tests {
-    use super::*;
-    use proptest::prelude::*;
-
-    #[test]
-    fn moments_of_large_numbers_keep_their_digits() {
-        let value = |row: usize| 1e9 + if row.is_multiple_of(2) { 1.0 } else { -1.0 };
-        let mut counter = BinaryCounter::new();
-        for chunk in 0..25 {
-            counter.push(Moments::of((0..4000).map(move |row| (value(chunk * 4000 + row), 1.0))));
-        }
-        let moments = counter.finish().unwrap();
-        assert_eq!((moments.mean, moments.deviation()), (1e9, 1.0));
-    }
-
-    #[test]
-    fn a_constant_has_no_deviation_whatever_the_rounding() {
-        assert_eq!(Moments::of([(0.1, 1.0); 10].into_iter()).deviation(), 0.0);
-    }
-
-    proptest! {
-        #[test]
-        fn merged_moments_are_those_of_the_whole(
-            values in prop::collection::vec((-1e3..1e3f64, 0.1..5.0f64), 2..60),
-            cut in 0usize..60,
-        ) {
-            let (left, right) = values.split_at(cut.min(values.len()));
-            let whole = Moments::of(values.iter().copied());
-            let mut merged = Moments::of(left.iter().copied());
-            merged.merge(Moments::of(right.iter().copied()));
-            prop_assert!((merged.mean - whole.mean).abs() < 1e-10);
-            prop_assert!((merged.squares - whole.squares).abs() < 1e-10 * (1.0 + whole.squares));
-            prop_assert_eq!((merged.least, merged.most), (whole.least, whole.most));
-        }
     }
 }

@@ -56,30 +56,46 @@ pub(crate) fn read_chunks(
 
 /// The coded rows of a fit.
 pub(crate) struct Table<'a> {
-    rows: &'a mut dyn Rows,
-    reader: Reader,
-    relabel: Relabel,
-    /// All chunks, where they fit the allowance.
-    kept: Option<Vec<Chunk>>,
+    storage: Storage<'a>,
     threads: usize,
-    /// Rows of the fit in the first pass.
-    first_pass_rows: u64,
+    rows: u64,
+}
+
+/// Where the rows are.
+enum Storage<'a> {
+    /// In memory.
+    Kept(Vec<Chunk>),
+    /// At their source, to be read again.
+    Source { rows: &'a mut dyn Rows, reader: Box<Reader>, relabel: Relabel },
 }
 
 impl<'a> Table<'a> {
-    /// A table after its first pass. `kept` are all chunks as they were read, if they were kept.
-    pub(crate) fn new(
+    /// A table of rows in memory.
+    pub(crate) fn in_memory(chunks: Vec<Chunk>, threads: usize) -> Self {
+        let rows = chunks.iter().map(|chunk| chunk.rows() as u64).sum();
+        Self { storage: Storage::Kept(chunks), threads: threads.max(1), rows }
+    }
+
+    /// A table of rows that are read again for each pass; the first pass found `count` of them.
+    pub(crate) fn at_source(
         rows: &'a mut dyn Rows,
         reader: Reader,
         relabel: Relabel,
-        mut kept: Option<Vec<Chunk>>,
         threads: usize,
-        first_pass_rows: u64,
+        count: u64,
     ) -> Self {
-        for chunk in kept.iter_mut().flatten() {
-            relabel.apply(chunk);
-        }
-        Self { rows, reader, relabel, kept, threads: threads.max(1), first_pass_rows }
+        let storage = Storage::Source { rows, reader: Box::new(reader), relabel };
+        Self { storage, threads: threads.max(1), rows: count }
+    }
+
+    /// Number of rows.
+    pub(crate) fn rows(&self) -> u64 {
+        self.rows
+    }
+
+    /// Number of threads that sum.
+    pub(crate) fn threads(&self) -> usize {
+        self.threads
     }
 
     /// Sums over all rows in one pass. Each chunk is summed by one thread, row by row; the sums of
@@ -90,15 +106,18 @@ impl<'a> Table<'a> {
     ) -> Result<Option<T>, FitError> {
         let mut counter = BinaryCounter::new();
         let threads = self.threads;
-        if let Some(kept) = &self.kept {
-            for window in kept.chunks(threads) {
-                sum_window(window, &sum, &mut counter);
+        let (rows, reader, relabel) = match &mut self.storage {
+            Storage::Kept(chunks) => {
+                for window in chunks.chunks(threads) {
+                    sum_window(window, &sum, &mut counter);
+                }
+                return Ok(counter.finish());
             }
-            return Ok(counter.finish());
-        }
-        let (relabel, mut now) = (&self.relabel, 0);
+            Storage::Source { rows, reader, relabel } => (rows, reader, relabel),
+        };
+        let mut now = 0;
         let mut window = Vec::with_capacity(threads);
-        read_chunks(self.rows, &mut self.reader, &mut |mut chunk| {
+        read_chunks(*rows, reader, &mut |mut chunk| {
             relabel.apply(&mut chunk);
             now += chunk.rows() as u64;
             window.push(chunk);
@@ -109,16 +128,16 @@ impl<'a> Table<'a> {
             Ok(())
         })?;
         sum_window(&window, &sum, &mut counter);
-        if now == self.first_pass_rows {
+        if now == self.rows {
             Ok(counter.finish())
         } else {
-            Err(FitError::Changed { before: self.first_pass_rows, now })
+            Err(FitError::Changed { before: self.rows, now })
         }
     }
 }
 
 /// Sums the chunks of a window, each on its own thread.
-fn sum_window<T: Merge + Send>(
+pub(crate) fn sum_window<T: Merge + Send>(
     window: &[Chunk],
     sum: &(impl Fn(&Chunk) -> T + Sync),
     counter: &mut BinaryCounter<T>,

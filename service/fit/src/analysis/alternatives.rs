@@ -14,11 +14,12 @@ use crate::analysis::Analysis;
 use crate::analysis::field_tests::{Distribution, TestResult};
 use crate::chunk::Chunk;
 use crate::error::FitError;
-use crate::estimate::{Solution, View, estimate_view};
+use crate::estimate::{Solution, estimate_view};
 use crate::layout::{BLOCK_ROWS, Layout};
 use crate::likelihood::{Coefficients, Order, for_each_score};
 use crate::linear::{Factor, dot};
-use crate::newton::{Optimum, Stopped};
+use crate::newton::{Objective, Optimum, Stopped};
+use crate::objective::{Likelihood, View};
 use crate::raw::BackTransform;
 use crate::reduce::{Merge, add_all};
 use crate::split::draw;
@@ -304,8 +305,6 @@ impl Analysis<'_> {
         view: &View,
         point: &[f64],
     ) -> Result<f64, FitError> {
-        use crate::estimate::Likelihood;
-        use crate::newton::Objective;
         let mut likelihood = Likelihood::of_view(&mut self.table, layout, weights, view);
         Ok(likelihood.evaluate(point, Order::Value)?.value)
     }

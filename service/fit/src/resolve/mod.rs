@@ -1,29 +1,22 @@
 //! What the survey decides: the final categories, levels, knots and scales.
 
-use std::collections::BTreeMap;
+mod knots;
+mod levels;
 
 use kilter_model::{
-    Design, Field, FlagField, Form, INTERCEPT, LevelsField, MISSING_LEVEL, Means, MissingNumber, NumberField,
-    Outcome, Spline, near_miss,
+    Design, Field, FlagField, Form, INTERCEPT, Means, MissingNumber, NumberField, Outcome, Spline,
 };
 
 use crate::chunk::{Chunk, ChunkColumn};
 use crate::error::FitError;
 use crate::layout::Scaling;
-use crate::plan::{
-    FieldPlan, FormPlan, LevelsPlan, MissingLevelPlan, MissingNumberPlan, NumberPlan, OutcomePlan, Plan,
-};
+use crate::moments::Moments;
+use crate::plan::{FieldPlan, FormPlan, LevelsPlan, MissingNumberPlan, NumberPlan, OutcomePlan, Plan};
 use crate::reader::Reader;
-use crate::survey::{FieldSurvey, Moments, Sample, Sampled, Survey};
+use crate::survey::{FieldSurvey, NumberSurvey, Sample, Survey};
 
-/// Probabilities of the knots of a restricted cubic spline, for 3 to 7 knots (Harrell 2001).
-const KNOT_QUANTILES: [&[f64]; 5] = [
-    &[0.10, 0.50, 0.90],
-    &[0.05, 0.35, 0.65, 0.95],
-    &[0.05, 0.275, 0.50, 0.725, 0.95],
-    &[0.05, 0.23, 0.41, 0.59, 0.77, 0.95],
-    &[0.025, 0.1833, 0.3417, 0.50, 0.6583, 0.8167, 0.975],
-];
+use knots::spline_knots;
+use levels::LevelSet;
 
 /// From first numbers to final ones.
 #[derive(Debug, Clone)]
@@ -231,10 +224,7 @@ struct Resolving<'a> {
 
 impl Resolving<'_> {
     fn number(&mut self, index: usize, plan: &NumberPlan, sample: Option<&Sample>) -> FieldFound {
-        let FieldSurvey::Number { value, columns, missing_rows, by_category } = &self.survey.fields[index]
-        else {
-            unreachable!("a number field is surveyed as a number")
-        };
+        let NumberSurvey { value, columns, missing_rows, by_category } = self.survey.number(index);
         let name = &plan.name;
         let (form, moments) = match (plan.form, sample) {
             (FormPlan::Spline(knots), Some(sample)) => self.spline(name, knots, sample),
@@ -248,7 +238,7 @@ impl Resolving<'_> {
         }
         let missing = match plan.missing {
             MissingNumberPlan::Value(value) => MissingNumber::Value(value),
-            MissingNumberPlan::MeanAndFlag if *missing_rows > 0 => MissingNumber::MeanAndFlag(Means {
+            MissingNumberPlan::MeanAndFlag if missing_rows > 0 => MissingNumber::MeanAndFlag(Means {
                 means: moments.iter().map(|moments| moments.mean).collect(),
             }),
             MissingNumberPlan::MeanAndFlag => {
@@ -267,7 +257,7 @@ impl Resolving<'_> {
             missing,
             observed: (value.weight > 0.0).then_some([value.least, value.most]),
         });
-        let ranges = self.categories.reordered(by_category, [f64::INFINITY, f64::NEG_INFINITY]);
+        let ranges = self.categories.reordered(&by_category, [f64::INFINITY, f64::NEG_INFINITY]);
         FieldFound { field, moments, relabel: vec![], cases: vec![], ranges }
     }
 
@@ -327,173 +317,4 @@ impl Resolving<'_> {
             ranges: vec![],
         })
     }
-}
-
-/// The levels of a field, decided.
-struct LevelSet {
-    field: LevelsField,
-    relabel: Vec<u32>,
-    warnings: Vec<String>,
-}
-
-impl LevelSet {
-    fn new(plan: &LevelsPlan, texts: &[String], cases: &[Vec<f64>]) -> Result<Self, FitError> {
-        let name = &plan.name;
-        let mut warnings = Vec::new();
-        let total = |level: usize| cases[level].iter().sum::<f64>();
-        let missing_policy =
-            |level: usize| texts[level] == MISSING_LEVEL && plan.missing == MissingLevelPlan::Reference;
-        let seen: Vec<usize> = (0..texts.len()).filter(|&level| total(level) > 0.0).collect();
-        let mut order: Vec<usize> = seen.iter().copied().filter(|&level| !missing_policy(level)).collect();
-        if plan.levels.is_none() {
-            order.sort_by(|&a, &b| {
-                (texts[a] == MISSING_LEVEL, &texts[a]).cmp(&(texts[b] == MISSING_LEVEL, &texts[b]))
-            });
-        }
-        for listed in plan.levels.iter().flatten() {
-            if !order.iter().any(|&level| texts[level] == *listed) {
-                warnings.push(format!(
-                    "field `{name}`: level `{listed}` has no rows and is left out of the model"
-                ));
-            }
-        }
-        let reference = reference_level(plan, texts, &order, &total)?;
-        let (mut levels, merged) = merge_rare(plan, texts, &order, &total, &reference);
-        if let Some(MISSING_LEVEL) = levels.iter().rev().nth(1).map(String::as_str) {
-            // The level that rare ones were merged into stands before the one for missing values.
-            let last = levels.len() - 1;
-            levels.swap(last - 1, last);
-        }
-        if levels.len() == 1 {
-            warnings.push(format!("field `{name}` is always `{reference}`, so it has no coefficient"));
-        }
-        let position = |text: &str| levels.iter().position(|level| level == text);
-        let relabel = texts.iter().enumerate().map(|(level, text)| {
-            let text = if missing_policy(level) { &reference } else { merged.get(text).unwrap_or(text) };
-            position(text).unwrap_or(0) as u32
-        });
-        let relabel = relabel.collect();
-        let unseen = match plan.unseen.as_str() {
-            policy @ ("refuse" | "reference") => policy.to_owned(),
-            level if position(level).is_some() => level.to_owned(),
-            level => {
-                let hint = near_miss(level, &levels)
-                    .map_or_else(String::new, |near| format!(" (did you mean `{near}`?)"));
-                warnings.push(format!(
-                    "field `{name}`: `unseen` names level `{level}`, which has no rows{hint}; unseen levels will be refused"
-                ));
-                "refuse".to_owned()
-            }
-        };
-        let missing = match plan.missing {
-            MissingLevelPlan::Refuse => "refuse".to_owned(),
-            MissingLevelPlan::Reference => "reference".to_owned(),
-            MissingLevelPlan::Level if position(MISSING_LEVEL).is_some() => MISSING_LEVEL.to_owned(),
-            MissingLevelPlan::Level => {
-                warnings.push(format!(
-                    "field `{name}` is never missing in the fit, so records without it will be refused"
-                ));
-                "refuse".to_owned()
-            }
-        };
-        let field = LevelsField { name: name.clone(), levels, reference, merged, unseen, missing };
-        Ok(Self { field, relabel, warnings })
-    }
-}
-
-/// The level of the plan; else the first listed one; else the most frequent one.
-fn reference_level(
-    plan: &LevelsPlan,
-    texts: &[String],
-    order: &[usize],
-    total: &dyn Fn(usize) -> f64,
-) -> Result<String, FitError> {
-    let named = plan.reference.as_ref().or(plan.levels.iter().flatten().next());
-    let empty =
-        |level: &str| FitError::EmptyReferenceLevel { field: plan.name.clone(), level: level.to_owned() };
-    if let Some(named) = named {
-        // Rare levels may be merged into a reference that does not occur by itself.
-        let is_target = plan.rare.as_ref().is_some_and(|rare| {
-            rare.into == *named && order.iter().any(|&level| total(level) < rare.below as f64)
-        });
-        let occurs = order.iter().any(|&level| texts[level] == *named);
-        return if occurs || is_target { Ok(named.clone()) } else { Err(empty(named)) };
-    }
-    let sensible: Vec<usize> = order.iter().copied().filter(|&level| texts[level] != MISSING_LEVEL).collect();
-    let totals: Vec<f64> = sensible.iter().map(|&level| total(level)).collect();
-    match sensible.get(first_largest(&totals)) {
-        Some(&level) => Ok(texts[level].clone()),
-        None => Err(empty(MISSING_LEVEL)),
-    }
-}
-
-/// The levels that stay, in order, and where each rare one goes. The reference and the level for
-/// missing values always stay.
-fn merge_rare(
-    plan: &LevelsPlan,
-    texts: &[String],
-    order: &[usize],
-    total: &dyn Fn(usize) -> f64,
-    reference: &str,
-) -> (Vec<String>, BTreeMap<String, String>) {
-    let mut levels = Vec::new();
-    let mut merged = BTreeMap::new();
-    for &level in order {
-        let text = &texts[level];
-        let into = plan.rare.as_ref().filter(|rare| {
-            total(level) < rare.below as f64
-                && rare.into != *text
-                && text != reference
-                && text != MISSING_LEVEL
-        });
-        match into {
-            Some(rare) => {
-                merged.insert(text.clone(), rare.into.clone());
-            }
-            None => levels.push(text.clone()),
-        }
-    }
-    if let Some(rare) = plan.rare.as_ref().filter(|rare| !merged.is_empty() && !levels.contains(&rare.into)) {
-        levels.push(rare.into.clone());
-    }
-    (levels, merged)
-}
-
-/// Knots at the usual quantiles of the cases; fewer where quantiles coincide.
-///
-/// A quantile lies at position `(N - 1) q` among the N cases in order, between its neighbours by
-/// linear interpolation. Knots of a sample are rounded to four significant digits.
-fn spline_knots(sample: &[Sampled], knots: u32, partial: bool) -> Vec<f64> {
-    let mut cases: Vec<(f64, f64)> = sample.iter().map(|sampled| (sampled.value, sampled.count)).collect();
-    cases.sort_by(|a, b| a.0.total_cmp(&b.0));
-    let total: f64 = cases.iter().map(|(_, count)| count).sum();
-    let mut chosen: Vec<f64> = KNOT_QUANTILES[knots as usize - 3]
-        .iter()
-        .map(|probability| quantile(&cases, total, *probability))
-        .map(|knot| if partial { rounded(knot) } else { knot })
-        .collect();
-    chosen.dedup();
-    chosen
-}
-
-fn quantile(cases: &[(f64, f64)], total: f64, probability: f64) -> f64 {
-    let position = ((total - 1.0) * probability).max(0.0);
-    let below = value_at(cases, position.floor());
-    below + (value_at(cases, position.floor() + 1.0) - below) * position.fract()
-}
-
-/// The value of the case with this number, counted from 0 in ascending order.
-fn value_at(cases: &[(f64, f64)], number: f64) -> f64 {
-    let mut before = 0.0;
-    for &(value, count) in cases {
-        before += count;
-        if before > number {
-            return value;
-        }
-    }
-    cases.last().map_or(f64::NAN, |&(value, _)| value)
-}
-
-fn rounded(value: f64) -> f64 {
-    format!("{value:.3e}").parse().unwrap_or(value)
 }

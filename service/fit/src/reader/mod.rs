@@ -3,59 +3,27 @@
 //! Levels and categories that the plan does not list are numbered in the order of their first
 //! appearance among the rows of the fit; [`crate::resolve`] gives them their final numbers.
 
-use std::collections::HashMap;
+mod fields;
+mod numbering;
+
 use std::ops::ControlFlow;
 
 use kilter_model::cells::shorten;
-use kilter_model::{
-    Batch, Coded, Coder, Column, Field, Form, LevelsField, MISSING_LEVEL, MISSING_TIME, Means, MissingNumber,
-    NumberField, TextColumn, near_miss,
-};
+use kilter_model::{Batch, Coded, Coder, Column, Field, MISSING_LEVEL, MISSING_TIME, TextColumn, near_miss};
 
 use crate::chunk::{CHUNK_ROWS, Chunk, ChunkColumn};
 use crate::error::FitError;
 use crate::fitted::RefusedRow;
-use crate::plan::{
-    ColumnPlaces, FieldPlan, LevelsPlan, MissingLevelPlan, MissingNumberPlan, NumberPlan, Plan,
-};
+use crate::plan::{ColumnPlaces, FieldPlan, Plan};
 use crate::split::{Split, hash_text, row_key};
+
+use fields::{field_before_the_survey, listed_levels};
+use numbering::{Interner, LevelNumbers};
 
 /// How many refused rows are kept with their reasons; the rest is counted.
 const REFUSED_KEPT: usize = 1000;
 /// How many different levels or categories a column may have.
 const MOST_LEVELS: usize = 10_000;
-const UNKNOWN: u32 = u32::MAX;
-
-/// Texts in the order of their first appearance, with their numbers.
-#[derive(Debug, Clone, Default)]
-pub(crate) struct Interner {
-    texts: Vec<String>,
-    index: HashMap<String, u32>,
-}
-
-impl Interner {
-    fn of(texts: impl IntoIterator<Item = String>) -> Self {
-        let mut interner = Self::default();
-        for text in texts {
-            interner.number(&text);
-        }
-        interner
-    }
-
-    fn number(&mut self, text: &str) -> u32 {
-        if let Some(&number) = self.index.get(text) {
-            return number;
-        }
-        let number = self.texts.len() as u32;
-        self.texts.push(text.to_owned());
-        self.index.insert(text.to_owned(), number);
-        number
-    }
-
-    pub(crate) fn texts(&self) -> &[String] {
-        &self.texts
-    }
-}
 
 /// What was counted on the way.
 #[derive(Debug, Clone, Default)]
@@ -181,7 +149,7 @@ impl Reader {
                 && let Some(Column::Text(texts)) = batch.columns.get(index)
             {
                 let seen = texts.dictionary.iter().cloned();
-                levels.levels = Interner::of(seen.chain([MISSING_LEVEL.to_owned()])).texts;
+                levels.levels = Interner::of(seen.chain([MISSING_LEVEL.to_owned()])).into_texts();
             }
         }
         let coded = Coder::new(&fields).code(batch);
@@ -231,9 +199,9 @@ impl Reader {
             if weight == 0.0 {
                 continue;
             }
-            let text = cells.outcome.map_or(UNKNOWN, |texts| texts.codes[row]);
+            let text = cells.outcome.map_or(0, |texts| texts.codes[row]);
             let category = categories.number(text as usize, &mut self.categories);
-            if self.categories.texts.len() > MOST_LEVELS {
+            if self.categories.texts().len() > MOST_LEVELS {
                 return Err(too_many(&self.plan.outcome.field));
             }
             self.statistics.fractional_counts |= count.fract() != 0.0;
@@ -308,7 +276,7 @@ impl Reader {
                 }
             }
         }
-        if let Some(index) = self.levels.iter().position(|levels| levels.texts.len() > MOST_LEVELS) {
+        if let Some(index) = self.levels.iter().position(|levels| levels.texts().len() > MOST_LEVELS) {
             return Err(too_many(self.plan.fields[index].name()));
         }
         let pending = &mut self.pending;
@@ -334,28 +302,6 @@ struct CodedBatch {
     levels: Vec<LevelNumbers>,
 }
 
-/// Levels of one batch and the numbers that they have among all rows; a level gets its number when
-/// the first row of the fit has it.
-#[derive(Debug, Clone, Default)]
-struct LevelNumbers {
-    names: Vec<String>,
-    numbers: Vec<u32>,
-}
-
-impl LevelNumbers {
-    fn of(names: Vec<String>) -> Self {
-        let numbers = vec![UNKNOWN; names.len()];
-        Self { names, numbers }
-    }
-
-    fn number(&mut self, local: usize, all: &mut Interner) -> u32 {
-        if self.numbers[local] == UNKNOWN {
-            self.numbers[local] = all.number(&self.names[local]);
-        }
-        self.numbers[local]
-    }
-}
-
 /// The columns of a batch that are no fields.
 struct RoleCells<'a> {
     outcome: Option<&'a TextColumn>,
@@ -377,60 +323,5 @@ impl<'a> RoleCells<'a> {
             id: column(places.id).and_then(Column::texts),
             time: column(places.time).and_then(Column::times),
         }
-    }
-}
-
-/// Levels known before any row was seen: those listed, the one that rare levels go to, and the one
-/// for missing values.
-fn listed_levels(plan: &LevelsPlan) -> Vec<String> {
-    let Some(listed) = &plan.levels else { return Vec::new() };
-    let into = plan.rare.as_ref().map(|rare| rare.into.clone());
-    let missing = MISSING_LEVEL.to_owned();
-    listed.iter().cloned().chain(into).chain([missing]).collect()
-}
-
-/// A field as far as the plan alone says what it is. Missing levels are kept apart here whatever
-/// becomes of them later.
-fn field_before_the_survey(plan: &FieldPlan) -> Field {
-    match plan {
-        FieldPlan::Number(number) => Field::Number(number_before_the_survey(number)),
-        FieldPlan::Flag(flag) => Field::Flag(flag.clone()),
-        FieldPlan::Levels(levels) => {
-            let known = Interner::of(listed_levels(levels)).texts;
-            let first = levels.levels.iter().flatten().next();
-            let missing = match levels.missing {
-                MissingLevelPlan::Refuse => "refuse".to_owned(),
-                MissingLevelPlan::Reference | MissingLevelPlan::Level => MISSING_LEVEL.to_owned(),
-            };
-            Field::Levels(LevelsField {
-                name: levels.name.clone(),
-                reference: levels.reference.as_ref().or(first).cloned().unwrap_or_default(),
-                levels: known,
-                merged: std::collections::BTreeMap::new(),
-                unseen: levels.unseen.clone(),
-                missing,
-            })
-        }
-    }
-}
-
-fn number_before_the_survey(plan: &NumberPlan) -> NumberField {
-    use crate::plan::FormPlan;
-    NumberField {
-        name: plan.name.clone(),
-        unit: plan.unit.clone(),
-        form: match plan.form {
-            FormPlan::Log => Form::Log,
-            FormPlan::Log1p => Form::Log1p,
-            // These accept any number, and the form plays no other part in coding.
-            FormPlan::AsIs | FormPlan::Polynomial(_) | FormPlan::Spline(_) => Form::AsIs,
-        },
-        range: plan.range,
-        missing: match plan.missing {
-            MissingNumberPlan::Refuse => MissingNumber::Refuse,
-            MissingNumberPlan::Value(value) => MissingNumber::Value(value),
-            MissingNumberPlan::MeanAndFlag => MissingNumber::MeanAndFlag(Means { means: Vec::new() }),
-        },
-        observed: None,
     }
 }
