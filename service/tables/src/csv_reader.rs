@@ -75,7 +75,7 @@ impl CsvSource {
             if record.len() == self.names.len() {
                 cells.push_row(|place| self.places[place].and_then(|place| record.get(place)));
             } else {
-                cells.push_bad_row(format!("has {} cells, the head has {}", record.len(), self.names.len()));
+                cells.push_bad_row(ragged(&record, self.names.len()));
             }
             if self.options.carry {
                 rows.push(record);
@@ -100,6 +100,18 @@ impl Source for CsvSource {
     fn run(mut self: Box<Self>, deliver: &mut dyn FnMut(Result<TableBatch, TableError>) -> bool) {
         deliver_all(|first_row| self.batch(first_row), deliver);
     }
+}
+
+/// What is wrong with a row of too few or too many cells. The cells beyond the head have no column
+/// to be kept in, so they are kept here.
+fn ragged(record: &StringRecord, needed: usize) -> String {
+    let beyond: Vec<&str> = record.iter().skip(needed).collect();
+    let kept = if beyond.is_empty() {
+        String::new()
+    } else {
+        format!("; beyond it stands `{}`", beyond.join("`, `"))
+    };
+    format!("has {} cells, the head has {needed}{kept}", record.len())
 }
 
 /// The separator that stands most often in the head.

@@ -6,6 +6,7 @@
 //!
 //! This is the only crate that names polars.
 
+mod carried;
 mod columnar;
 mod csv_reader;
 mod csv_writer;

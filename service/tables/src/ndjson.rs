@@ -93,8 +93,17 @@ impl NdjsonSource {
         if lines.is_empty() {
             return Ok(None);
         }
+        let batch = reader.finish();
+        if self.options.carry {
+            // A line that is no object is carried as one that holds its text, so that what is
+            // written is NDJSON again and nothing is lost.
+            for cell in batch.bad_cells.iter().filter(|cell| cell.field.is_empty()) {
+                let text = std::mem::take(&mut objects[cell.row]);
+                objects[cell.row] = serde_json::json!({ "line_text": text }).to_string();
+            }
+        }
         let rows = if self.options.carry { Rows::Objects(objects) } else { Rows::NotCarried };
-        Ok(Some(TableBatch { first_row, batch: reader.finish(), lines, rows }))
+        Ok(Some(TableBatch { first_row, batch, lines, rows }))
     }
 }
 

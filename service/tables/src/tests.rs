@@ -154,7 +154,7 @@ fn bad_cells_and_ragged_rows_are_data_with_their_lines() {
         [
             (2, "weight", "`heavy` is not a number"),
             (5, "", "has 2 cells, the head has 3"),
-            (6, "", "has 4 cells, the head has 3"),
+            (6, "", "has 4 cells, the head has 3; beyond it stands `b`"),
             (7, "weight", "`5,5` is not a number"),
         ]
     );
@@ -171,6 +171,37 @@ fn a_bad_line_of_ndjson_leaves_its_neighbours() {
     let lines: Vec<u64> = batch.batch.bad_cells.iter().map(|cell| batch.line(cell.row)).collect();
     assert_eq!(lines, [2, 4, 5]);
     assert_eq!(batch.batch.columns[0].numbers().unwrap()[4], 2.0);
+}
+
+/// Refused lines are kept, as NDJSON that reads back, whatever they were.
+#[test]
+fn lines_that_are_no_objects_are_kept_as_texts() {
+    let folder = tempfile::tempdir().unwrap();
+    let lines = ["{\"a\": 1,}", "nonsense", "[1, 2]", "{}"];
+    let start = file(&folder, "a.ndjson", lines.join("\n"));
+    let to = folder.path().join("b.ndjson");
+    let reader = TableReader::open(&start, options(vec![])).unwrap();
+    let mut writer = TableWriter::create(&to, &reader, &[]).unwrap();
+    for batch in reader {
+        writer.write(&batch.unwrap(), &[0, 1, 2, 3], &[]).unwrap();
+    }
+    writer.finish().unwrap();
+    let text = fs::read_to_string(&to).unwrap();
+    let kept: Vec<serde_json::Value> = text.lines().map(|line| serde_json::from_str(line).unwrap()).collect();
+    for (line, object) in lines.iter().zip(&kept).take(3) {
+        assert_eq!(object["line_text"], *line);
+    }
+    assert_eq!(kept[3], serde_json::json!({}));
+}
+
+#[test]
+fn a_key_of_a_later_object_clashes_too() {
+    let folder = tempfile::tempdir().unwrap();
+    let text = "{\"a\": \"score\"}\n{\"a\": {\"score\": 1}}\n{\"score\": 2}\n";
+    let start = file(&folder, "a.ndjson", text);
+    let error = copy(&start, &folder.path().join("b.ndjson"), vec![]).unwrap_err().to_string();
+    assert!(error.contains("a.ndjson") && error.contains("`score` already"), "{error}");
+    assert!(!folder.path().join("b.ndjson").exists());
 }
 
 #[test]

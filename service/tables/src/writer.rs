@@ -11,9 +11,9 @@ use polars::prelude::{
     SchemaExt, SerWriter, Series,
 };
 use polars_arrow::io::ipc::write::default_ipc_fields;
-use serde_json::{Map, Value};
+use serde_json::Value;
 
-use crate::columnar::text_of;
+use crate::carried::{cells_of, key_already_there, line_of};
 use crate::csv_writer::{CsvStream, CsvWriter, csv_writer, end};
 use crate::error::TableError;
 use crate::format::Format;
@@ -43,7 +43,7 @@ pub enum Appended {
 }
 
 impl Appended {
-    fn text(&self, row: usize) -> String {
+    pub(crate) fn text(&self, row: usize) -> String {
         match self {
             Self::Number(values) => values[row].to_string(),
             Self::Text(values) => values[row].clone(),
@@ -51,7 +51,7 @@ impl Appended {
         }
     }
 
-    fn json(&self, row: usize) -> Value {
+    pub(crate) fn json(&self, row: usize) -> Value {
         match self {
             Self::Number(values) => values[row].into(),
             Self::Text(values) => values[row].as_str().into(),
@@ -90,6 +90,8 @@ pub struct TableWriter {
     path: PathBuf,
     /// The file as it is written aside; `None` for a stream.
     aside: Option<Aside>,
+    /// The table whose rows are written, for messages.
+    like: PathBuf,
     names: Vec<String>,
     appended: Vec<(String, AppendedKind)>,
     sink: Sink,
@@ -142,7 +144,7 @@ impl TableWriter {
         {
             return Err(TableError::NameClash { path: like.path().to_owned(), column: (*name).to_owned() });
         }
-        Self::open_file(path, like.column_names().to_vec(), appended)
+        Self::open_file(path, like.path(), like.column_names().to_vec(), appended)
     }
 
     /// Begins a table that has only new columns.
@@ -150,7 +152,7 @@ impl TableWriter {
     /// # Errors
     /// Where the file cannot be made.
     pub fn create_new(path: &Path, columns: &[(&str, AppendedKind)]) -> Result<Self, TableError> {
-        Self::open_file(path, Vec::new(), columns)
+        Self::open_file(path, path, Vec::new(), columns)
     }
 
     /// Begins a table on a stream: CSV or NDJSON.
@@ -174,11 +176,19 @@ impl TableWriter {
             path: path.to_owned(),
             reason: format!("{} needs a file, not a stream", format.name()),
         })?;
-        Ok(Self { path: path.to_owned(), aside: None, names, appended: owned(appended), sink })
+        Ok(Self {
+            path: path.to_owned(),
+            aside: None,
+            like: like.path().to_owned(),
+            names,
+            appended: owned(appended),
+            sink,
+        })
     }
 
     fn open_file(
         path: &Path,
+        like: &Path,
         names: Vec<String>,
         appended: &[(&str, AppendedKind)],
     ) -> Result<Self, TableError> {
@@ -192,7 +202,14 @@ impl TableWriter {
             Some(sink) => sink,
             None => Sink::NotOpened(format, file),
         };
-        Ok(Self { path: path.to_owned(), aside: Some(aside), names, appended: owned(appended), sink })
+        Ok(Self {
+            path: path.to_owned(),
+            aside: Some(aside),
+            like: like.to_owned(),
+            names,
+            appended: owned(appended),
+            sink,
+        })
     }
 
     /// Writes the given rows of a batch, ascending, with one value per row of each appended column.
@@ -216,6 +233,9 @@ impl TableWriter {
             }
             Sink::Ndjson(stream) => {
                 for (place, &row) in rows.iter().enumerate() {
+                    if let Some(column) = key_already_there(&batch.rows, row, &self.appended) {
+                        return Err(TableError::NameClash { path: self.like.clone(), column });
+                    }
                     let line = line_of(&batch.rows, &self.names, row, &self.appended, appended, place);
                     writeln!(stream, "{line}").map_err(|error| TableError::write(&self.path, error))?;
                 }
@@ -372,86 +392,5 @@ fn csv_failed(path: &Path, error: &csv::Error) -> TableError {
     match error.kind() {
         csv::ErrorKind::Io(cause) => TableError::write(path, io::Error::from(cause.kind())),
         _ => TableError::Write { path: path.to_owned(), reason: error.to_string() },
-    }
-}
-
-/// The cells of a row as text, one per name. A CSV row that has more or fewer keeps what it has,
-/// filled up to the number of names.
-fn cells_of(rows: &Rows, names: &[String], row: usize) -> Vec<String> {
-    match rows {
-        Rows::NotCarried => Vec::new(),
-        Rows::Cells(records) => {
-            let mut cells: Vec<String> = records[row].iter().map(str::to_owned).collect();
-            cells.resize(names.len(), String::new());
-            cells
-        }
-        Rows::Objects(objects) => {
-            let object: Map<String, Value> = serde_json::from_str(&objects[row]).unwrap_or_default();
-            names.iter().map(|name| object.get(name).map_or_else(String::new, value_as_text)).collect()
-        }
-        Rows::Frame(frame) => frame
-            .columns()
-            .iter()
-            .map(|column| column.get(row).map_or_else(|_| String::new(), |value| text_of(&value)))
-            .collect(),
-    }
-}
-
-fn value_as_text(value: &Value) -> String {
-    match value {
-        Value::Null => String::new(),
-        Value::String(text) => text.clone(),
-        other => other.to_string(),
-    }
-}
-
-/// A row as a line of NDJSON.
-fn line_of(
-    rows: &Rows,
-    names: &[String],
-    row: usize,
-    appended_names: &[(String, AppendedKind)],
-    appended: &[Appended],
-    place: usize,
-) -> String {
-    let added: Vec<String> = appended_names
-        .iter()
-        .zip(appended)
-        .map(|((name, _), values)| format!("{}:{}", Value::from(name.as_str()), values.json(place)))
-        .collect();
-    let added = added.join(",");
-    let own = match rows {
-        Rows::NotCarried => String::new(),
-        Rows::Objects(objects) => {
-            match objects[row].trim().strip_prefix('{').and_then(|o| o.strip_suffix('}')) {
-                Some(inner) => inner.trim().to_owned(),
-                // A line that is no object is kept as a text.
-                None => format!("\"line_text\":{}", Value::from(objects[row].as_str())),
-            }
-        }
-        Rows::Cells(_) => pairs(names, cells_of(rows, names, row).into_iter().map(Value::from)),
-        Rows::Frame(frame) => pairs(
-            names,
-            frame.columns().iter().map(|column| column.get(row).map_or(Value::Null, |value| json_of(&value))),
-        ),
-    };
-    if own.is_empty() { format!("{{{added}}}") } else { format!("{{{own},{added}}}") }
-}
-
-fn pairs(names: &[String], values: impl Iterator<Item = Value>) -> String {
-    let pair = |(name, value): (&String, Value)| format!("{}:{value}", Value::from(name.as_str()));
-    names.iter().zip(values).map(pair).collect::<Vec<_>>().join(",")
-}
-
-fn json_of(value: &polars::prelude::AnyValue) -> Value {
-    use polars::prelude::AnyValue;
-    match value {
-        AnyValue::Null => Value::Null,
-        AnyValue::Boolean(flag) => (*flag).into(),
-        AnyValue::Float64(number) => (*number).into(),
-        AnyValue::Float32(number) => f64::from(*number).into(),
-        AnyValue::UInt64(number) => (*number).into(),
-        value if value.is_integer() => value.extract::<i64>().map_or(Value::Null, Value::from),
-        value => text_of(value).into(),
     }
 }
