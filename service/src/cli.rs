@@ -35,8 +35,12 @@ pub(crate) enum Command {
     Drift(DriftArgs),
     /// Make a model file a version of its name
     Publish(PublishArgs),
-    /// Check model files against schema, arithmetic and fingerprint
+    /// Check model files against schema, arithmetic, fingerprint and signature
     Check(CheckArgs),
+    /// Sign model files
+    Sign(SignArgs),
+    /// Write the probabilities as one standard SQL expression
+    Sql(SqlArgs),
     /// Print a JSON Schema
     Schema(SchemaArgs),
 }
@@ -66,6 +70,16 @@ pub(crate) struct FitArgs {
     /// Model file to write [default: NAME.model.json beside the plan]
     #[arg(short, long, value_name = "MODEL")]
     pub(crate) output: Option<PathBuf>,
+    /// Write a page to look at: effects, coefficients, calibration, mix, tests and warnings
+    #[arg(long, value_name = "HTML")]
+    pub(crate) report: Option<PathBuf>,
+    /// Write field tests, average marginal effects and goodness of fit as JSON; `-` prints them as text
+    #[arg(long, value_name = "JSON")]
+    pub(crate) analysis: Option<PathBuf>,
+    /// Also test the independence of irrelevant alternatives and fit each category separately against
+    /// the reference, in report and analysis; takes many fits
+    #[arg(long)]
+    pub(crate) diagnose: bool,
 }
 
 #[derive(Debug, Args)]
@@ -168,6 +182,30 @@ pub(crate) struct CheckArgs {
     /// Model files
     #[arg(required = true)]
     pub(crate) models: Vec<PathBuf>,
+    /// File with the public key (64 hexadecimal digits) that the model files must be signed with
+    #[arg(long, value_name = "FILE")]
+    pub(crate) key: Option<PathBuf>,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct SignArgs {
+    /// Model files; each is written anew with its signature
+    pub(crate) models: Vec<PathBuf>,
+    /// File with the secret key (Ed25519, 64 hexadecimal digits)
+    #[arg(long, value_name = "FILE")]
+    pub(crate) key: PathBuf,
+    /// Make a new key: the secret one in the file of --key, the public one beside it in FILE.public
+    #[arg(long)]
+    pub(crate) new_key: bool,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct SqlArgs {
+    /// Model file
+    pub(crate) model: PathBuf,
+    /// Write a whole query over this table instead of the expression alone
+    #[arg(long, value_name = "TABLE")]
+    pub(crate) from: Option<String>,
 }
 
 #[derive(Debug, Args)]

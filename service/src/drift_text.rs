@@ -5,6 +5,7 @@ use std::fmt::Write;
 use kilter_drift::{Report, Severity, Statistic, Status};
 
 use crate::monitor::DriftReport;
+use crate::numbers::{dash, p_in_words, percent, rounded, whole};
 use crate::text_table::{Align, Table};
 
 /// The report in lines of text. Numbers are rounded for people; the JSON has them in full.
@@ -204,47 +205,6 @@ pub(crate) fn test_in_words(test: &Statistic) -> String {
 pub(crate) fn p_value(test: &Statistic) -> String {
     match test.valid_p() {
         None => dash(),
-        Some(p) if p < 1e-4 => "< 0.0001".into(),
-        Some(p) => format!("{p:.4}"),
-    }
-}
-
-/// A share as a percentage.
-pub(crate) fn percent(share: Option<f64>) -> String {
-    share.map_or_else(dash, |share| format!("{:.1} %", share * 100.0))
-}
-
-/// A number with some decimals.
-pub(crate) fn rounded(value: Option<f64>, decimals: usize) -> String {
-    value.map_or_else(dash, |value| format!("{value:.decimals$}"))
-}
-
-/// A count with its thousands apart.
-pub(crate) fn whole(count: f64) -> String {
-    let digits = format!("{count:.0}");
-    let mut grouped = String::new();
-    for (place, digit) in digits.chars().enumerate() {
-        if place > 0 && (digits.len() - place).is_multiple_of(3) && digit.is_ascii_digit() {
-            grouped.push('\u{202f}');
-        }
-        grouped.push(digit);
-    }
-    grouped
-}
-
-fn dash() -> String {
-    "–".into()
-}
-
-#[cfg(test)]
-mod tests {
-    use super::*;
-
-    #[test]
-    fn numbers_for_people() {
-        assert_eq!(whole(1_234_567.0), "1\u{202f}234\u{202f}567");
-        assert_eq!(whole(0.0), "0");
-        assert_eq!(percent(Some(0.123_45)), "12.3 %");
-        assert_eq!(rounded(None, 2), "–");
+        Some(p) => p_in_words(p),
     }
 }

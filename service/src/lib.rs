@@ -3,6 +3,7 @@
 //! This crate joins the others to one program. It holds no formulas: those are in `kilter-model`
 //! (scoring), `kilter-fit` (likelihood and inference) and `kilter-drift` (drift statistics).
 
+mod analysis;
 mod cli;
 mod clock;
 mod commands;
@@ -18,9 +19,12 @@ mod layout;
 mod metrics;
 mod monitor;
 mod monitored;
+mod numbers;
 mod observing;
 mod pages;
+mod progress;
 mod registry;
+mod report;
 mod scoring;
 mod tables;
 mod terminal;
@@ -67,6 +71,8 @@ fn dispatch(command: Command) -> anyhow::Result<Done> {
         Command::Drift(arguments) => commands::drift::run(&arguments),
         Command::Publish(arguments) => commands::publish::run(&arguments),
         Command::Check(arguments) => commands::check::run(&arguments),
+        Command::Sign(arguments) => commands::sign::run(&arguments),
+        Command::Sql(arguments) => commands::sql::run(&arguments),
         Command::Schema(arguments) => commands::schema::run(&arguments),
     }
 }

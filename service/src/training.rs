@@ -94,9 +94,24 @@ impl RowSource for TrainingRows {
     }
 }
 
+/// Sums over the rows of a fit and over those kept out of it.
+#[derive(Debug)]
+pub(crate) struct Evaluated {
+    /// Over the rows of the fit.
+    pub(crate) fitted: Summary,
+    /// Over the rows kept out of it.
+    pub(crate) held_out: Summary,
+    /// Number of rows kept out.
+    pub(crate) held_out_rows: u64,
+}
+
 /// Completes a fitted model: data fingerprint, baseline and holdout figures, computed with the one
 /// scorer from the rows of the fit.
-pub(crate) fn complete(plan: &Plan, rows: &mut TrainingRows, fitted: &mut Fitted) -> anyhow::Result<()> {
+pub(crate) fn complete(
+    plan: &Plan,
+    rows: &mut TrainingRows,
+    fitted: &mut Fitted,
+) -> anyhow::Result<Evaluated> {
     if let Some(fit) = &mut fitted.model.fit {
         fit.data_fingerprint = Some(rows.fingerprint()?);
     }
@@ -117,7 +132,8 @@ pub(crate) fn complete(plan: &Plan, rows: &mut TrainingRows, fitted: &mut Fitted
     if sums.held_out_rows > 0 {
         fitted.model.holdout = Some(holdout(&sums.held_out, &mix, sums.held_out_rows)?);
     }
-    Ok(())
+    let Sums { fitted, held_out, held_out_rows, .. } = sums;
+    Ok(Evaluated { fitted, held_out, held_out_rows })
 }
 
 /// Number of coefficients that are no intercepts, those of terms left out not counted.

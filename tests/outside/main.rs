@@ -4,6 +4,7 @@ mod architecture;
 mod commands;
 mod demo;
 mod drop_folder;
+mod fit_commands;
 mod fits;
 mod service;
 mod support;

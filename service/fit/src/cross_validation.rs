@@ -1,5 +1,7 @@
 //! Choosing the ridge penalty by cross-validation.
 
+use serde::Serialize;
+
 use crate::chunk::Chunk;
 use crate::error::FitError;
 use crate::estimate::start_of;
@@ -22,7 +24,7 @@ const NEAR: f64 = 1e-4;
 const SEED: u64 = 0;
 
 /// How the ridge penalty was chosen.
-#[derive(Debug, Clone, PartialEq)]
+#[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct CrossValidation {
     /// Number of folds.
     pub folds: usize,
@@ -39,7 +41,7 @@ pub struct CrossValidation {
 }
 
 /// One penalty that was tried.
-#[derive(Debug, Clone, Copy, PartialEq)]
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
 pub struct Candidate {
     /// The penalty.
     pub ridge: f64,

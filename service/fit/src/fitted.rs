@@ -3,6 +3,7 @@
 use std::collections::BTreeMap;
 
 use kilter_model::ModelFile;
+use serde::Serialize;
 
 use crate::cross_validation::CrossValidation;
 use crate::split::Split;
@@ -21,7 +22,7 @@ pub struct RefusedRow {
 }
 
 /// Figures of a penalised fit.
-#[derive(Debug, Clone, PartialEq)]
+#[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct RidgeFigures {
     /// The penalty.
     pub ridge: f64,

@@ -1,14 +1,16 @@
 //! `kilter fit`: fits a plan and writes a model file.
 
-use std::io::IsTerminal;
 use std::path::Path;
 
 use anyhow::Context;
-use kilter_fit::{FitSettings, Fitted, Plan, Progress, fit};
+use kilter_fit::{FitSettings, Fitted, Plan, Session};
 
+use crate::analysis::{FitAnalysis, as_text};
 use crate::cli::FitArgs;
 use crate::durable::write_durably;
 use crate::exit::{Done, Hint, WrongUse};
+use crate::progress::FitProgress;
+use crate::report::{FitReport, fit_report};
 use crate::terminal::say;
 use crate::training::{TrainingRows, complete};
 
@@ -16,15 +18,48 @@ use crate::training::{TrainingRows, complete};
 const MOST_TOLD: usize = 10;
 
 pub(crate) fn run(arguments: &FitArgs) -> anyhow::Result<Done> {
+    let analysing = arguments.report.is_some() || arguments.analysis.is_some();
+    if arguments.diagnose && !analysing {
+        return Err(WrongUse(
+            "--diagnose goes into a report or an analysis: add --report or --analysis".into(),
+        )
+        .into());
+    }
     let plan = read_plan(&arguments.plan)?;
     let folder = arguments.plan.parent().filter(|folder| *folder != Path::new("")).unwrap_or(Path::new("."));
     let output = arguments.output.clone().unwrap_or_else(|| folder.join(format!("{}.model.json", plan.name)));
     let mut rows = TrainingRows::open(&plan, folder)?;
-    let mut fitted = fit(&plan, &mut rows, FitSettings::default(), &mut |progress| tell(&progress))?;
-    end_progress();
-    complete(&plan, &mut rows, &mut fitted)?;
-    write_model(&fitted, &output)?;
+    let mut progress = FitProgress::new();
+    let (mut fitted, analysis) = {
+        let mut show = |step| progress.show(&step);
+        let session = Session::open(&plan, &mut rows, FitSettings::default(), &mut show)?;
+        let mut fit = session.fit(&mut show)?;
+        let analysis = if analysing {
+            progress.say("testing fields, averaging effects");
+            Some(FitAnalysis::of(&mut fit, arguments.diagnose)?)
+        } else {
+            None
+        };
+        (fit.fitted, analysis)
+    };
+    progress.say("scoring the rows of the fit");
+    let evaluated = complete(&plan, &mut rows, &mut fitted)?;
+    drop(progress);
+    fitted.model.seal()?;
+    let model = &fitted.model;
+    write(&output, "model file", &model.to_json()?)?;
+    if let (Some(path), Some(analysis)) = (&arguments.report, &analysis) {
+        let report = FitReport { model, analysis, evaluated: &evaluated };
+        write(path, "report", &fit_report(&report)?)?;
+    }
     tell_result(&fitted, &output)?;
+    if let (Some(path), Some(analysis)) = (&arguments.analysis, &analysis) {
+        if path == Path::new("-") {
+            say(format_args!("\n{}", as_text(analysis)))?;
+        } else {
+            write(path, "analysis", &(serde_json::to_string_pretty(analysis)? + "\n"))?;
+        }
+    }
     Ok(Done::found(fitted.refused_rows > 0))
 }
 
@@ -41,35 +76,9 @@ fn read_plan(path: &Path) -> anyhow::Result<Plan> {
     })
 }
 
-fn write_model(fitted: &Fitted, output: &Path) -> anyhow::Result<()> {
-    let mut model = fitted.model.clone();
-    model.seal()?;
-    write_durably(output, model.to_json()?.as_bytes())
-        .with_context(|| format!("could not write model file `{}`", output.display()))
-}
-
-/// On a terminal one line that is written over, elsewhere a line per step.
-fn tell(progress: &Progress) {
-    let line = match progress {
-        Progress::Surveying { rows } => format!("reading: {rows} rows"),
-        Progress::Step { number, log_likelihood, decrement } => {
-            format!(
-                "step {number}: log-likelihood {log_likelihood:.6}, {decrement:.1e} standard errors to go"
-            )
-        }
-        _ => return,
-    };
-    if std::io::stderr().is_terminal() {
-        eprint!("\r\u{1b}[2K{line}");
-    } else if matches!(progress, Progress::Step { .. }) {
-        eprintln!("{line}");
-    }
-}
-
-fn end_progress() {
-    if std::io::stderr().is_terminal() {
-        eprint!("\r\u{1b}[2K");
-    }
+fn write(path: &Path, what: &str, text: &str) -> anyhow::Result<()> {
+    write_durably(path, text.as_bytes())
+        .with_context(|| format!("could not write {what} `{}`", path.display()))
 }
 
 fn tell_result(fitted: &Fitted, output: &Path) -> std::io::Result<()> {

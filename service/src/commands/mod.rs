@@ -11,6 +11,8 @@ pub(crate) mod schema;
 pub(crate) mod score;
 pub(crate) mod serve;
 pub(crate) mod show;
+pub(crate) mod sign;
+pub(crate) mod sql;
 pub(crate) mod sweep;
 
 use std::path::Path;
@@ -37,7 +39,15 @@ fn read_version(path: &Path) -> anyhow::Result<Version> {
 }
 
 fn read_text(path: &Path) -> anyhow::Result<String> {
-    std::fs::read_to_string(path).with_context(|| format!("could not read model file `{}`", path.display()))
+    let read = || kilter_model::read_limited(std::fs::File::open(path)?);
+    read().with_context(|| format!("could not read model file `{}`", path.display()))
+}
+
+/// Reads a key of 64 hexadecimal digits from a file.
+fn read_key(path: &Path) -> anyhow::Result<[u8; 32]> {
+    let wrong = |reason: String| WrongUse(format!("key file `{}`: {reason}", path.display()));
+    let text = std::fs::read_to_string(path).map_err(|error| wrong(error.to_string()))?;
+    Ok(kilter_model::key_from_hexadecimal(&text).map_err(|error| wrong(error.to_string()))?)
 }
 
 /// Opens the ledger of a configuration.

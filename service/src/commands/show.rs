@@ -2,14 +2,16 @@
 
 use std::fmt::Write;
 
+use kilter_fit::analysis::{FieldTest, fit_statistics, wald_tests};
 use kilter_fit::inference::{Estimate, coefficients};
 use kilter_model::{FitFigures, Holdout, ModelFile};
 use serde_json::{Value, json};
 
+use crate::analysis::{statistics_in_words, tests_as_table};
 use crate::cli::ShowArgs;
 use crate::commands::read_model;
-use crate::drift_text::{percent, whole};
 use crate::exit::Done;
+use crate::numbers::{percent, whole};
 use crate::terminal::say;
 use crate::text_table::{Align, Table};
 
@@ -19,15 +21,16 @@ pub(super) const LEVEL: f64 = 0.95;
 pub(crate) fn run(arguments: &ShowArgs) -> anyhow::Result<Done> {
     let model = read_model(&arguments.model)?;
     let estimates = coefficients(&model, LEVEL)?;
+    let tests = wald_tests(&model)?;
     if arguments.json {
-        say(serde_json::to_string_pretty(&as_json(&model, &estimates))?)?;
+        say(serde_json::to_string_pretty(&as_json(&model, &estimates, &tests))?)?;
     } else {
-        say(as_text(&model, &estimates))?;
+        say(as_text(&model, &estimates, &tests))?;
     }
     Ok(Done::Well)
 }
 
-fn as_json(model: &ModelFile, estimates: &[Estimate]) -> Value {
+fn as_json(model: &ModelFile, estimates: &[Estimate], tests: &[FieldTest]) -> Value {
     let mut categories = serde_json::Map::new();
     for category in model.compared_categories() {
         let own = estimates.iter().filter(|estimate| estimate.category == category);
@@ -38,6 +41,8 @@ fn as_json(model: &ModelFile, estimates: &[Estimate]) -> Value {
         "version": model.fingerprint,
         "outcome": model.outcome,
         "categories": categories,
+        "field_tests": tests,
+        "statistics": model.fit.as_ref().map(fit_statistics),
         "fit": model.fit,
         "holdout": model.holdout,
     })
@@ -60,7 +65,7 @@ pub(super) fn estimate_as_json(estimate: &Estimate) -> Value {
     })
 }
 
-fn as_text(model: &ModelFile, estimates: &[Estimate]) -> String {
+fn as_text(model: &ModelFile, estimates: &[Estimate], tests: &[FieldTest]) -> String {
     let mut text = format!("{} {}\n", model.name, model.fingerprint);
     // Writing to a string cannot fail, here and below.
     let _ = writeln!(text, "{}", model.purpose);
@@ -78,6 +83,9 @@ fn as_text(model: &ModelFile, estimates: &[Estimate]) -> String {
         let own: Vec<&Estimate> = estimates.iter().filter(|estimate| estimate.category == category).collect();
         let _ =
             writeln!(text, "\n{category} against {}\n{}", model.outcome.reference, estimates_as_table(&own));
+    }
+    if !tests.is_empty() {
+        let _ = write!(text, "\nTests of whole fields\n{}\n", tests_as_table(tests));
     }
     if let Some(fit) = &model.fit {
         text.push_str(&fit_in_words(fit));
@@ -119,18 +127,16 @@ pub(super) fn estimates_as_table(estimates: &[&Estimate]) -> Table {
 
 fn fit_in_words(fit: &FitFigures) -> String {
     let mut text = format!(
-        "Fit: {} rows, {} cases, {} parameters, {} Newton steps\n\
-         log-likelihood {:.4}, with intercepts only {:.4}, McFadden R² {:.4}\n\
-         AIC {:.2}, BIC {:.2}; gradient {:.1e}; finite and unique optimum certified ({:.2e} < 1)\n",
+        "Fit: {} rows, {} cases, {} parameters, {} steps\n\
+         log-likelihood {:.4}, with intercepts only {:.4}\n{}\
+         gradient {:.1e}; finite and unique optimum certified ({:.2e} < 1)\n",
         whole(fit.rows as f64),
         whole(fit.weight),
         fit.parameters,
         fit.iterations,
         fit.log_likelihood,
         fit.log_likelihood_null,
-        fit.mcfadden_r2,
-        fit.aic,
-        fit.bic,
+        statistics_in_words(&fit_statistics(fit)),
         fit.gradient_norm,
         fit.certificate
     );

@@ -96,7 +96,13 @@ fn fit_and_publish(folder: &Path, round: &Quillhaven) -> anyhow::Result<()> {
     by_hand.push_str("S-odd-2,2026-05-01T09:00:00Z,heavy,20,12,0,4,house,morning,0,Quayside\n");
     write(&folder.join("stops.csv"), &by_hand)?;
     let output = folder.join("attempt.model.json");
-    commands::fit::run(&FitArgs { plan: folder.join("plan.toml"), output: Some(output.clone()) })?;
+    commands::fit::run(&FitArgs {
+        plan: folder.join("plan.toml"),
+        output: Some(output.clone()),
+        report: Some(folder.join("fit.html")),
+        analysis: None,
+        diagnose: false,
+    })?;
     commands::publish::run(&PublishArgs { model: output, role: Role::Live, config: config_of(folder) })?;
     Ok(())
 }

@@ -1,11 +1,13 @@
 //! The pages: an overview of all models, and one page per model.
 
 mod model;
+mod parts;
 pub(crate) mod plots;
 
 use maud::{DOCTYPE, Markup, PreEscaped, html};
 
 pub(crate) use model::model_page;
+pub(crate) use parts::{calibration_curves, mix_bars, with_code};
 
 const STYLE: &str = include_str!("style.css");
 
@@ -22,8 +24,13 @@ pub(crate) struct OverviewRow {
     pub(crate) worst: Option<String>,
 }
 
-/// The frame of every page. Nothing is loaded from outside.
+/// The frame of a page of the service.
 fn page(title: &str, body: &Markup) -> Markup {
+    document(title, &html! { nav aria-label="Pages" { a href="/" { "all models" } } main { (body) } })
+}
+
+/// A document that stands alone: nothing is loaded from outside.
+pub(crate) fn document(title: &str, body: &Markup) -> Markup {
     html! {
         (DOCTYPE)
         html lang="en" {
@@ -33,10 +40,7 @@ fn page(title: &str, body: &Markup) -> Markup {
                 title { (title) " – kilter" }
                 style { (PreEscaped(STYLE)) }
             }
-            body {
-                nav aria-label="Pages" { a href="/" { "all models" } }
-                main { (body) }
-            }
+            body { (body) }
         }
     }
 }

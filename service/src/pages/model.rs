@@ -3,12 +3,13 @@
 
 use kilter_drift::{Report, SegmentGroup};
 use kilter_model::ModelFile;
-use maud::{Markup, PreEscaped, html};
+use maud::{Markup, html};
 
-use super::plots::{self, CurvePoint, ShareBar};
+use super::parts::{calibration_curves, mix_bars, with_code};
 use super::{page, short_version};
-use crate::drift_text::{p_value, percent, rounded, severity, test_in_words, whole};
+use crate::drift_text::{p_value, severity, test_in_words};
 use crate::monitor::DriftReport;
+use crate::numbers::{percent, rounded, whole};
 
 /// The page of a model for one span of days.
 pub(crate) fn model_page(model: &ModelFile, drift: &DriftReport) -> Markup {
@@ -40,36 +41,10 @@ pub(crate) fn model_page(model: &ModelFile, drift: &DriftReport) -> Markup {
     page(&model.name, &body)
 }
 
-/// A sentence whose names in backticks are set apart.
-fn with_code(sentence: &str) -> Markup {
-    html! {
-        @for (place, part) in sentence.split('`').enumerate() {
-            @if place % 2 == 1 { code { (part) } } @else { (part) }
-        }
-    }
-}
-
 fn mix(report: &Report) -> Markup {
-    let bars: Vec<ShareBar> = report
-        .mix
-        .categories
-        .iter()
-        .filter_map(|category| {
-            Some(ShareBar {
-                category: category.category.clone(),
-                predicted: category.expected_share?,
-                observed: category.observed_share?,
-                interval: category.observed_interval?,
-            })
-        })
-        .collect();
     html! {
         h2 id="mix" { "Mix" }
-        @if !bars.is_empty() {
-            (PreEscaped(plots::mix(&bars)))
-            p { span class="key" style="--swatch: var(--predicted)" { "predicted " } " "
-                span class="key" style="--swatch: var(--observed)" { "observed, with its 95 % interval" } }
-        }
+        (mix_bars(report))
         p { "All categories together: " (test_in_words(&report.mix.joint)) "." }
         div class="scroll" { table {
             thead { tr { @for title in ["category", "predicted", "observed", "at the fit", "z", "p"] { th scope="col" { (title) } } } }
@@ -89,30 +64,7 @@ fn calibration(report: &Report) -> Markup {
     html! {
         h2 id="calibration" { "Calibration" }
         p { "Intercepts and slope together: " (test_in_words(&report.calibration.joint)) ". On the line, records given a probability come true as often as it says; bars are 95 % intervals." }
-        div class="pictures" {
-            @for category in &report.reliability {
-                @let points = category.bins.iter().filter(|bin| !bin.grey).filter_map(|bin| Some(CurvePoint {
-                    predicted: bin.mean_probability,
-                    observed: bin.observed_share,
-                    interval: bin.interval?,
-                })).collect::<Vec<_>>();
-                div { (PreEscaped(plots::calibration(&category.category, &points))) }
-            }
-        }
-        @for category in &report.reliability {
-            details {
-                summary { "Table: " (category.category) }
-                div class="scroll" { table {
-                    thead { tr { @for title in ["bin", "records", "mean probability", "observed share"] { th scope="col" { (title) } } } }
-                    tbody { @for bin in &category.bins { tr {
-                        td { (format!("{} to {}", bin.from, bin.to)) }
-                        td { (whole(bin.n)) }
-                        td { (percent(Some(bin.mean_probability))) }
-                        td { (percent(Some(bin.observed_share))) }
-                    } } }
-                } }
-            }
-        }
+        (calibration_curves(report))
     }
 }
 

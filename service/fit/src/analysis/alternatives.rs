@@ -9,6 +9,7 @@
 //! fit.
 
 use faer::{Mat, MatRef, Side};
+use serde::Serialize;
 
 use crate::analysis::Analysis;
 use crate::analysis::field_tests::{Distribution, TestResult};
@@ -31,7 +32,7 @@ const HALVINGS: u64 = 11;
 ///
 /// Tests of this kind often disagree, and a term that is missing from the model makes them reject
 /// as well. They are evidence for or against, never a verdict.
-#[derive(Debug, Clone, PartialEq)]
+#[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct IndependenceTest {
     /// The category that was left out.
     pub left_out: String,
@@ -44,7 +45,7 @@ pub struct IndependenceTest {
 }
 
 /// `d' (V_r - V_f)^-1 d` with the model covariances of the smaller and the joint fit.
-#[derive(Debug, Clone, Copy, PartialEq)]
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
 pub struct Hausman {
     /// The statistic with its p-value.
     pub test: TestResult,
@@ -54,7 +55,7 @@ pub struct Hausman {
 }
 
 /// The median over random halves of the cases; the result of one of them depends much on the draw.
-#[derive(Debug, Clone, Copy, PartialEq)]
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
 pub struct SmallHsiao {
     /// Number of halvings for which both halves could be fitted.
     pub halvings: u64,
@@ -63,7 +64,7 @@ pub struct SmallHsiao {
 }
 
 /// A separate fit of two categories (Begg and Gray 1984) beside the joint one.
-#[derive(Debug, Clone, PartialEq)]
+#[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct SeparateFit {
     /// The category, fitted against the reference on the cases of these two.
     pub category: String,
@@ -72,7 +73,7 @@ pub struct SeparateFit {
 }
 
 /// One coefficient of a separate fit beside the joint one.
-#[derive(Debug, Clone, PartialEq)]
+#[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct SeparateTerm {
     /// The term.
     pub term: String,

@@ -3,6 +3,7 @@
 
 use faer::MatRef;
 use kilter_model::Field;
+use serde::Serialize;
 
 use crate::analysis::Analysis;
 use crate::chunk::{Chunk, ChunkColumn};
@@ -12,7 +13,8 @@ use crate::likelihood::{Coefficients, add_linear, for_each_block, products};
 use crate::reduce::{Merge, add_all};
 
 /// The change whose effect is averaged.
-#[derive(Debug, Clone, PartialEq, Eq)]
+#[derive(Debug, Clone, PartialEq, Eq, Serialize)]
+#[serde(rename_all = "kebab-case")]
 pub enum Change {
     /// Of a number, per unit.
     PerUnit,
@@ -26,7 +28,7 @@ pub enum Change {
 }
 
 /// The average effect of a change of one field on the probability of one category.
-#[derive(Debug, Clone, PartialEq)]
+#[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct Effect {
     /// The field.
     pub field: String,

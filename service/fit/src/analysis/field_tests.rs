@@ -4,16 +4,17 @@ use statrs::distribution::{ChiSquared, ContinuousCDF, FisherSnedecor};
 
 use faer::Mat;
 use kilter_model::{Design, Field, Form, StandardErrors};
+use serde::Serialize;
 
 use crate::analysis::Analysis;
+use crate::analysis::wald::{too_few_clusters, wald};
 use crate::bias_reduction::BiasReduction;
-use crate::covariance::FEW_CLUSTERS;
 use crate::error::FitError;
 use crate::estimate::{Method, estimate_without};
-use crate::linear::{Factor, dot};
 
 /// What is tested to be without effect.
-#[derive(Debug, Clone, PartialEq, Eq)]
+#[derive(Debug, Clone, PartialEq, Eq, Serialize)]
+#[serde(rename_all = "kebab-case")]
 pub enum Tested {
     /// A field with all its interactions.
     Field(String),
@@ -26,7 +27,8 @@ pub enum Tested {
 }
 
 /// The distribution that a statistic has if nothing is there.
-#[derive(Debug, Clone, Copy, PartialEq)]
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
+#[serde(rename_all = "kebab-case")]
 pub enum Distribution {
     /// Chi-squared.
     ChiSquared {
@@ -43,7 +45,7 @@ pub enum Distribution {
 }
 
 /// A statistic and how unlikely it is.
-#[derive(Debug, Clone, Copy, PartialEq)]
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
 pub struct TestResult {
     /// The statistic.
     pub statistic: f64,
@@ -67,7 +69,7 @@ impl TestResult {
 }
 
 /// Tests of one field, interaction or of everything.
-#[derive(Debug, Clone, PartialEq)]
+#[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct FieldTest {
     /// What is tested.
     pub tested: Tested,
@@ -139,13 +141,12 @@ impl Analysis<'_> {
             let statistic = 2.0 * (self.solution.optimum.at.value - without);
             TestResult::new(statistic.max(0.0), Distribution::ChiSquared { freedom: freedom as f64 })
         });
-        let clusters = self.covariance.clusters.filter(|&clusters| clusters < FEW_CLUSTERS);
         Ok(Some(FieldTest {
             tested,
             degrees_of_freedom: freedom as u64,
             wald: self.wald(gone),
             likelihood_ratio: ratio,
-            approximate: clusters.is_some_and(|clusters| clusters < 10 * freedom as u64),
+            approximate: too_few_clusters(self.covariance.clusters, freedom),
         }))
     }
 
@@ -184,30 +185,16 @@ impl Analysis<'_> {
 
     fn wald(&self, gone: &[bool]) -> Option<TestResult> {
         let tested = self.coefficients_of(gone);
-        let freedom = tested.len() as f64;
-        let clusters = self.covariance.clusters.map(|clusters| clusters as f64);
-        if clusters.is_some_and(|clusters| clusters - 1.0 < freedom) {
-            return None;
-        }
         let covariance = Mat::from_fn(tested.len(), tested.len(), |row, column| {
             self.covariance.matrix[(tested[row], tested[column])]
         });
         let point: Vec<f64> = tested.iter().map(|&index| self.solution.optimum.point[index]).collect();
-        let statistic = dot(&point, &Factor::new(covariance.as_ref()).ok()?.solve(&point));
-        Some(match clusters.filter(|&clusters| clusters < FEW_CLUSTERS as f64) {
-            // Hotelling's T-squared as an F.
-            Some(clusters) => {
-                let denominator = clusters - freedom;
-                let statistic = statistic * denominator / (freedom * (clusters - 1.0));
-                TestResult::new(statistic, Distribution::F { numerator: freedom, denominator })
-            }
-            None => TestResult::new(statistic, Distribution::ChiSquared { freedom }),
-        })
+        wald(&point, &covariance, self.covariance.clusters)
     }
 }
 
 /// What is tested, each with the terms that are gone then.
-fn hypotheses(design: &Design, interactions: &[[String; 2]]) -> Vec<(Tested, Vec<bool>)> {
+pub(super) fn hypotheses(design: &Design, interactions: &[[String; 2]]) -> Vec<(Tested, Vec<bool>)> {
     let terms = design.terms();
     let position = |name: &str| design.fields().iter().position(|field| field.name() == name);
     let mut found = Vec::new();

@@ -2,6 +2,8 @@
 
 use std::collections::BTreeMap;
 
+use serde::Serialize;
+
 use crate::analysis::Analysis;
 use crate::analysis::field_tests::{Distribution, TestResult};
 use crate::chunk::{Chunk, ChunkColumn};
@@ -25,7 +27,7 @@ const MOST_PATTERNS: usize = 100_000;
 ///
 /// A large p-value does not say that the model fits: the test overlooks much. On many rows it
 /// finds misfit too small to matter, so look at [`GoodnessOfFit::largest_gap`] as well.
-#[derive(Debug, Clone, PartialEq)]
+#[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct GoodnessOfFit {
     /// Groups from low to high; observed and expected weight of each category, the reference
     /// first.
@@ -39,7 +41,7 @@ pub struct GoodnessOfFit {
 }
 
 /// Observed and expected numbers by category.
-#[derive(Debug, Clone, PartialEq, Default)]
+#[derive(Debug, Clone, PartialEq, Default, Serialize)]
 pub struct ObservedExpected {
     /// Observed.
     pub observed: Vec<f64>,
@@ -48,7 +50,7 @@ pub struct ObservedExpected {
 }
 
 /// Tests of a model whose rows repeat: each distinct row of fields is a cell of a table.
-#[derive(Debug, Clone, PartialEq)]
+#[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct GroupedFit {
     /// Number of distinct rows.
     pub patterns: u64,

@@ -5,12 +5,14 @@ mod effects;
 mod field_tests;
 mod goodness;
 mod statistics;
+mod wald;
 
 pub use alternatives::{Hausman, IndependenceTest, SeparateFit, SeparateTerm, SmallHsiao};
 pub use effects::{Change, Effect};
 pub use field_tests::{Distribution, FieldTest, TestResult, Tested};
 pub use goodness::{GoodnessOfFit, GroupedFit, ObservedExpected};
 pub use statistics::{FitStatistics, fit_statistics};
+pub use wald::wald_tests;
 
 use crate::estimate::{Method, Solution};
 use crate::fitted::Fitted;

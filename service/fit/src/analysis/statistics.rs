@@ -1,9 +1,10 @@
 //! How well a model fits the rows that it was fitted to.
 
 use kilter_model::FitFigures;
+use serde::Serialize;
 
 /// Measures of fit. For sampling weights all of them are of the pseudo-likelihood.
-#[derive(Debug, Clone, Copy, PartialEq)]
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
 pub struct FitStatistics {
     /// `-2 ll + 2 d` with d coefficients (Akaike 1974).
     pub aic: f64,
