@@ -35,6 +35,14 @@ pub(crate) enum Command {
     Drift(DriftArgs),
     /// Make a model file a version of its name
     Publish(PublishArgs),
+    /// List the versions of a model, and who changed them when and why
+    Versions(VersionsArgs),
+    /// Make a version live
+    Promote(PromoteArgs),
+    /// Make the version live again that was live before
+    Rollback(RollbackArgs),
+    /// Look after the ledger
+    Ledger(LedgerArgs),
     /// Check model files against schema, arithmetic, fingerprint and signature
     Check(CheckArgs),
     /// Sign model files
@@ -49,7 +57,7 @@ pub(crate) enum Command {
 #[derive(Debug, Args)]
 pub(crate) struct ConfigArgs {
     /// Configuration file; paths in it are relative to it
-    #[arg(long, default_value = "kilter.toml", value_name = "FILE")]
+    #[arg(long, default_value = "kilter.toml", value_name = "FILE", global = true)]
     pub(crate) config: PathBuf,
 }
 
@@ -166,6 +174,115 @@ pub(crate) struct PublishArgs {
     pub(crate) role: Role,
     #[command(flatten)]
     pub(crate) config: ConfigArgs,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct VersionsArgs {
+    /// Name of the model
+    pub(crate) name: String,
+    #[command(flatten)]
+    pub(crate) config: ConfigArgs,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct PromoteArgs {
+    /// Name of the model
+    pub(crate) name: String,
+    /// Fingerprint of the version, or its beginning
+    pub(crate) version: String,
+    /// Why, for the audit trail
+    #[arg(long, default_value = "", value_name = "TEXT")]
+    pub(crate) why: String,
+    #[command(flatten)]
+    pub(crate) config: ConfigArgs,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct RollbackArgs {
+    /// Name of the model
+    pub(crate) name: String,
+    /// Why, for the audit trail
+    #[arg(long, default_value = "", value_name = "TEXT")]
+    pub(crate) why: String,
+    #[command(flatten)]
+    pub(crate) config: ConfigArgs,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct LedgerArgs {
+    #[command(subcommand)]
+    pub(crate) command: LedgerCommand,
+    #[command(flatten)]
+    pub(crate) config: ConfigArgs,
+}
+
+/// What to do with the ledger.
+#[derive(Debug, Subcommand)]
+pub(crate) enum LedgerCommand {
+    /// Compute all summaries anew from the raw records and compare
+    Verify,
+    /// Write a consistent copy while the service goes on
+    Backup(LedgerBackupArgs),
+    /// Make the ledger of a copy; there must be none yet
+    Restore(LedgerRestoreArgs),
+    /// Remove raw records and outcomes by age; summaries stay
+    Prune(LedgerPruneArgs),
+    /// Write one row per record: id, version, time, probabilities, outcome, observed_at
+    Export(LedgerExportArgs),
+    /// Forget records by their ids: record, scores, outcome, and their share of the summaries
+    Delete(LedgerDeleteArgs),
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct LedgerBackupArgs {
+    /// File to write
+    #[arg(short, long, value_name = "FILE")]
+    pub(crate) output: PathBuf,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct LedgerRestoreArgs {
+    /// The copy
+    pub(crate) copy: PathBuf,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct LedgerPruneArgs {
+    /// Age up to which records are kept, such as 400d [default: `keep` of the configuration]
+    #[arg(long, value_name = "SPAN")]
+    pub(crate) keep: Option<String>,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct LedgerExportArgs {
+    /// Name of the model
+    pub(crate) name: String,
+    /// File to write; its extension gives its format
+    #[arg(short, long, value_name = "FILE")]
+    pub(crate) output: PathBuf,
+    /// First day of record time [default: all]
+    #[arg(long, value_name = "T")]
+    pub(crate) from: Option<String>,
+    /// Last day of record time [default: all]
+    #[arg(long, value_name = "T")]
+    pub(crate) to: Option<String>,
+    /// Only this version: its fingerprint or the beginning of it
+    #[arg(long, value_name = "VERSION")]
+    pub(crate) version: Option<String>,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct LedgerDeleteArgs {
+    /// Name of the model
+    pub(crate) name: String,
+    /// Ids of the records
+    pub(crate) ids: Vec<String>,
+    /// File with ids, one per line
+    #[arg(long, value_name = "FILE")]
+    pub(crate) ids_from: Option<PathBuf>,
+    /// Why, for the audit trail
+    #[arg(long, default_value = "", value_name = "TEXT")]
+    pub(crate) why: String,
 }
 
 /// What a version does.

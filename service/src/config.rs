@@ -122,11 +122,14 @@ impl Default for ModelsConfig {
 pub(crate) struct LedgerConfig {
     /// Where the ledger is: `sqlite:` and a path.
     pub(crate) url: String,
+    /// How long raw records and outcomes are kept, by record time; summaries stay. For ever, if left
+    /// out. The running service removes older ones once a day.
+    pub(crate) keep: Option<Span>,
 }
 
 impl Default for LedgerConfig {
     fn default() -> Self {
-        Self { url: "sqlite:ledger.db".into() }
+        Self { url: "sqlite:ledger.db".into(), keep: None }
     }
 }
 
@@ -252,7 +255,7 @@ fn set_from_environment(document: &mut toml::Table, variable: &str, value: &str)
     const KEYS: [(&str, &[&str]); 3] = [
         ("service", &["listen", "largest_body", "requests_in_flight", "request_time", "log", "log_format"]),
         ("models", &["folder"]),
-        ("ledger", &["url"]),
+        ("ledger", &["url", "keep"]),
     ];
     for (table, keys) in KEYS {
         for key in keys {

@@ -25,6 +25,7 @@ mod pages;
 mod progress;
 mod registry;
 mod report;
+mod retention;
 mod scoring;
 mod tables;
 mod terminal;
@@ -69,6 +70,10 @@ fn dispatch(command: Command) -> anyhow::Result<Done> {
         Command::Sweep(arguments) => commands::sweep::run(&arguments),
         Command::Observe(arguments) => commands::observe::run(&arguments),
         Command::Drift(arguments) => commands::drift::run(&arguments),
+        Command::Versions(arguments) => commands::versions::list(&arguments),
+        Command::Promote(arguments) => commands::versions::promote(&arguments),
+        Command::Rollback(arguments) => commands::versions::rollback(&arguments),
+        Command::Ledger(arguments) => commands::ledger::run(&arguments),
         Command::Publish(arguments) => commands::publish::run(&arguments),
         Command::Check(arguments) => commands::check::run(&arguments),
         Command::Sign(arguments) => commands::sign::run(&arguments),

@@ -9,7 +9,7 @@ use serde::Serialize;
 
 use crate::metrics::Metrics;
 
-const MICROS_PER_DAY: i64 = 86_400_000_000;
+pub(crate) const MICROS_PER_DAY: i64 = 86_400_000_000;
 /// Days of outcomes that a report covers where no span is asked for.
 const USUAL_DAYS: i64 = 28;
 /// Age at which outcomes are taken to be known where the model file says nothing.

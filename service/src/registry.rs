@@ -5,7 +5,7 @@ use std::path::{Path, PathBuf};
 use std::sync::{Arc, PoisonError, RwLock};
 
 use anyhow::Context;
-use kilter_ledger::{Job, Ledger, VersionRow, VersionState};
+use kilter_ledger::{Act, Job, Ledger, Reply, VersionChange, VersionRow, VersionState};
 
 use crate::durable::write_durably;
 use crate::pages::short_version;
@@ -91,6 +91,19 @@ impl Registry {
         };
         self.ledger.write(Job::Publish { version: row, who: who.to_owned() })?;
         self.refresh()
+    }
+
+    /// Changes what a version does, and follows it.
+    ///
+    /// # Errors
+    /// Where the ledger cannot be written, or the change is not possible.
+    pub(crate) fn change(&self, model: &str, change: VersionChange, act: Act) -> anyhow::Result<VersionRow> {
+        let reply = self.ledger.write(Job::ChangeVersion { model: model.to_owned(), change, act })?;
+        self.refresh()?;
+        match reply {
+            Reply::Changed(version) => Ok(version),
+            _ => anyhow::bail!("the ledger gave no answer to the change"),
+        }
     }
 
     fn path_of(&self, model: &str, fingerprint: &str) -> PathBuf {

@@ -6,5 +6,6 @@ mod demo;
 mod drop_folder;
 mod fit_commands;
 mod fits;
+mod ledger_commands;
 mod service;
 mod support;

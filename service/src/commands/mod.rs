@@ -5,6 +5,7 @@ pub(crate) mod contrast;
 pub(crate) mod demo;
 pub(crate) mod drift;
 pub(crate) mod fit;
+pub(crate) mod ledger;
 pub(crate) mod observe;
 pub(crate) mod publish;
 pub(crate) mod schema;
@@ -14,6 +15,7 @@ pub(crate) mod show;
 pub(crate) mod sign;
 pub(crate) mod sql;
 pub(crate) mod sweep;
+pub(crate) mod versions;
 
 use std::path::Path;
 

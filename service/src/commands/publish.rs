@@ -4,6 +4,7 @@ use kilter_ledger::VersionState;
 
 use crate::cli::{PublishArgs, Role};
 use crate::clock::Clock;
+use crate::commands::ledger::user;
 use crate::commands::{open_registry, read_version};
 use crate::config::Config;
 use crate::exit::Done;
@@ -17,8 +18,7 @@ pub(crate) fn run(arguments: &PublishArgs) -> anyhow::Result<Done> {
         Role::Live => VersionState::Live,
         Role::Shadow => VersionState::Shadow,
     };
-    let who = std::env::var("USER").unwrap_or_else(|_| "command line".into());
-    registry.publish(&version, state, &who, Clock::System.now())?;
+    registry.publish(&version, state, &user(), Clock::System.now())?;
     let role = if state == VersionState::Live { "live" } else { "shadow" };
     say(format_args!("{} {} is {role}", version.model.name, version.fingerprint()))?;
     Ok(Done::Well)

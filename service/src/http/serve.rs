@@ -11,9 +11,12 @@ use tokio::sync::watch;
 use super::app::{App, router};
 use crate::config::DropConfig;
 use crate::drop_folder::DropFolder;
+use crate::retention::first_day_kept;
 
 /// How often what other processes published, and new outcomes, are looked for.
 const LOOK_EVERY: Duration = Duration::from_secs(2);
+/// How often raw records are looked for that are older than what is kept.
+const PRUNE_EVERY: Duration = Duration::from_secs(24 * 60 * 60);
 
 /// Serves until `stop` is ready; then finishes what was accepted.
 ///
@@ -29,6 +32,9 @@ pub(crate) async fn serve(
         app.monitored.mark(&version.model.name);
     }
     let mut tasks = vec![tokio::spawn(keep_current(app.clone(), stopped.clone()))];
+    if let Some(keep) = app.config.ledger.keep {
+        tasks.push(tokio::spawn(prune_regularly(app.clone(), keep.0, stopped.clone())));
+    }
     for drop in app.config.drop.clone() {
         tasks.push(tokio::spawn(sweep_regularly(app.clone(), drop, stopped.clone())));
     }
@@ -64,6 +70,26 @@ async fn keep_current(app: Arc<App>, mut stopped: watch::Receiver<bool>) {
             tracing::error!(%error, "the monitor failed");
         }
         if !wait(&mut stopped, LOOK_EVERY).await {
+            return;
+        }
+    }
+}
+
+/// Removes raw records and outcomes that are older than what is kept.
+async fn prune_regularly(app: Arc<App>, kept: Duration, mut stopped: watch::Receiver<bool>) {
+    loop {
+        let current = app.clone();
+        let before = first_day_kept(app.clock.now(), kept);
+        let pruned = tokio::task::spawn_blocking(move || current.registry.ledger().prune(before)).await;
+        match pruned {
+            Ok(Ok(pruned)) if pruned.records + pruned.outcomes > 0 => {
+                tracing::info!(records = pruned.records, outcomes = pruned.outcomes, "removed by age");
+            }
+            Ok(Ok(_)) => {}
+            Ok(Err(error)) => tracing::error!(%error, "old records could not be removed"),
+            Err(error) => tracing::error!(%error, "removing old records failed"),
+        }
+        if !wait(&mut stopped, PRUNE_EVERY).await {
             return;
         }
     }
