@@ -5,7 +5,9 @@ use std::collections::HashMap;
 
 use crate::batch::{Batch, Column, MISSING_CODE, MISSING_FLAG, Refusal, TextColumn};
 use crate::cells::shorten;
-use crate::file::{Field, FlagField, LevelsField, MISSING_LEVEL, MissingFlag, MissingNumber, NumberField};
+use crate::file::{
+    Field, FlagField, Form, LevelsField, MISSING_LEVEL, MissingFlag, MissingNumber, NumberField,
+};
 
 /// How an unseen level is written in [`Coded::inputs`].
 pub const UNSEEN: f64 = -1.0;
@@ -176,6 +178,18 @@ fn level_index(field: &LevelsField) -> HashMap<String, u32> {
     index
 }
 
+/// The numbers that are used without a word: within the valid and the fitted range, and with the
+/// logarithm that the form takes.
+fn silent_range(field: &NumberField) -> [f64; 2] {
+    let least = match field.form {
+        Form::Log => f64::MIN_POSITIVE,
+        Form::Log1p => -1.0 + f64::EPSILON,
+        Form::AsIs | Form::Polynomial(_) | Form::Spline(_) => f64::MIN,
+    };
+    let ranges = [field.range, field.observed].into_iter().flatten();
+    ranges.fold([least, f64::MAX], |[low, high], range| [low.max(range[0]), high.min(range[1])])
+}
+
 impl FieldCode<'_> {
     fn push(&mut self, input: f64, value: f64) {
         self.inputs.push(input);
@@ -199,6 +213,13 @@ impl FieldCode<'_> {
     }
 
     fn numbers(&mut self, field: &NumberField, cells: &[f64]) {
+        // Mostly there is nothing to say about a whole column.
+        let [low, high] = silent_range(field);
+        if cells.iter().all(|cell| (low..=high).contains(cell)) {
+            self.inputs.extend_from_slice(cells);
+            self.values.extend_from_slice(cells);
+            return;
+        }
         for &cell in cells {
             if cell.is_nan() {
                 self.missing_number(field);

@@ -7,7 +7,7 @@
 use std::collections::HashMap;
 
 use crate::batch::{CellKind, ColumnSpec};
-use crate::file::{Field, INTERCEPT, MissingFlag, MissingNumber, ModelFile, NumberField};
+use crate::file::{Field, Form, INTERCEPT, MissingFlag, MissingNumber, ModelFile, NumberField};
 use crate::limits::LARGEST_TERMS;
 
 mod size;
@@ -99,6 +99,15 @@ pub struct Design {
     terms: Vec<Term>,
 }
 
+impl DenseColumn {
+    /// Index of the field that the column is of.
+    pub fn field(&self) -> usize {
+        match *self {
+            Self::Basis { field, .. } | Self::MissingFlag { field } | Self::Flag { field } => field,
+        }
+    }
+}
+
 impl Design {
     /// The design of a model file.
     ///
@@ -187,6 +196,37 @@ impl Design {
                 DenseColumn::Flag { field } => values[field],
             };
         }
+    }
+
+    /// One dense column for several records, from their usable values of its field.
+    ///
+    /// # Shapes
+    /// `values` and `slots`: one per record.
+    pub(crate) fn fill_dense_column(&self, column: usize, values: &[f64], slots: &mut [f64]) {
+        match self.dense[column] {
+            DenseColumn::Basis { field, basis } if self.is_plain(field, basis) => {
+                slots.copy_from_slice(values)
+            }
+            DenseColumn::Basis { field, basis } => {
+                for (slot, value) in slots.iter_mut().zip(values) {
+                    *slot = self.basis(field, basis, *value);
+                }
+            }
+            DenseColumn::MissingFlag { .. } => {
+                for (slot, value) in slots.iter_mut().zip(values) {
+                    *slot = f64::from(u8::from(value.is_nan()));
+                }
+            }
+            DenseColumn::Flag { .. } => slots.copy_from_slice(values),
+        }
+    }
+
+    /// Whether a column is the number itself.
+    fn is_plain(&self, field: usize, basis: usize) -> bool {
+        let Field::Number(number) = &self.fields[field] else { return false };
+        basis == 0
+            && !matches!(number.form, Form::Log | Form::Log1p)
+            && !matches!(number.missing, MissingNumber::MeanAndFlag(_))
     }
 
     /// All terms of one record, the intercept first.
@@ -312,7 +352,7 @@ fn product(left: &Term, right: &Term) -> Term {
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::file::{FlagField, Form, LevelsField, Means};
+    use crate::file::{FlagField, LevelsField, Means};
 
     fn number(name: &str, form: Form, missing: MissingNumber) -> Field {
         Field::Number(NumberField {

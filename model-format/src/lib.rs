@@ -12,6 +12,7 @@ pub mod design;
 pub mod file;
 pub mod fingerprint;
 mod form;
+mod kernel;
 pub mod limits;
 pub mod records;
 pub mod scorer;

@@ -9,6 +9,7 @@ use crate::batch::{Batch, ColumnSpec, Refusal};
 use crate::coding::{Coded, Coder};
 use crate::design::{Design, DesignError};
 use crate::file::ModelFile;
+use crate::kernel::{AddColumn, BLOCK_ROWS, Softmax};
 
 /// A model file made ready to score.
 #[derive(Debug, Clone)]
@@ -124,56 +125,142 @@ impl Scorer {
 
     /// Scores all records of a batch.
     pub fn score(&self, batch: &Batch) -> Scored {
-        let mut coded = self.coder.code(batch);
-        let compared = self.categories - 1;
-        let mut log_odds = vec![f64::NAN; coded.rows * compared];
-        let mut probabilities = vec![f64::NAN; coded.rows * self.categories];
-        let usable = coded.usable();
-        let mut values = vec![0.0; coded.values.len()];
-        let mut dense = vec![0.0; self.design.dense().len()];
+        let coded = self.coder.code(batch);
+        let mut scored = Scored {
+            categories: self.categories,
+            log_odds: vec![f64::NAN; coded.rows * (self.categories - 1)],
+            probabilities: vec![f64::NAN; coded.rows * self.categories],
+            coded,
+        };
+        let usable = scored.coded.usable();
+        let mut room = Room::new(self, scored.coded.rows.min(BLOCK_ROWS));
         let mut beyond = Vec::new();
-        for row in (0..coded.rows).filter(|&row| usable[row]) {
-            for (slot, column) in values.iter_mut().zip(&coded.values) {
-                *slot = column[row];
-            }
-            let odds = &mut log_odds[row * compared..(row + 1) * compared];
-            self.log_odds(&values, &mut dense, odds);
-            if odds.iter().all(|odd| odd.is_finite()) {
-                let target = &mut probabilities[row * self.categories..(row + 1) * self.categories];
-                probabilities_from_log_odds(odds, self.reference, target);
-            } else {
-                odds.fill(f64::NAN);
-                let reason = "the log-odds of this record are too large to compute".to_owned();
-                beyond.push(Refusal { row, field: String::new(), reason });
+        for first in (0..scored.coded.rows).step_by(BLOCK_ROWS) {
+            let rows = first..(first + BLOCK_ROWS).min(scored.coded.rows);
+            room.take(rows.len());
+            self.score_block(&scored.coded.values, first, &mut room);
+            for row in rows.filter(|&row| usable[row]) {
+                if !scored.take_over(row, row - first, &room) {
+                    let reason = "the log-odds of this record are too large to compute".to_owned();
+                    beyond.push(Refusal { row, field: String::new(), reason });
+                }
             }
         }
         if !beyond.is_empty() {
-            coded.refused.extend(beyond);
-            coded.refused.sort_by_key(|refusal| refusal.row);
+            scored.coded.refused.extend(beyond);
+            scored.coded.refused.sort_by_key(|refusal| refusal.row);
         }
-        Scored { categories: self.categories, log_odds, probabilities, coded }
+        scored
     }
 
-    /// Log-odds of one record against the reference category.
-    fn log_odds(&self, values: &[f64], dense: &mut [f64], log_odds: &mut [f64]) {
+    /// Log-odds and probabilities of the records of a block, column by column. Records that are
+    /// refused are computed along; what comes out for them is not used.
+    fn score_block(&self, values: &[Vec<f64>], first: usize, room: &mut Room) {
+        let rows = room.rows;
+        for (column, dense) in self.design.dense().iter().enumerate() {
+            let of_field = &values[dense.field()][first..first + rows];
+            self.design.fill_dense_column(column, of_field, &mut room.dense[column * rows..][..rows]);
+        }
         let compared = self.categories - 1;
-        self.design.fill_dense(values, dense);
-        log_odds.fill(0.0);
+        let odds = &mut room.log_odds[..compared * rows];
+        odds.fill(0.0);
         for block in &self.blocks {
-            let mut cell = 0;
-            for &(field, levels) in &block.level_fields {
-                cell = cell * levels + values[field] as usize;
-            }
-            let term = block.terms[cell];
-            if term == NO_TERM {
+            block.fill_factor(&room.dense, &mut room.factor[..rows]);
+            if block.level_fields.is_empty() {
+                let coefficients = &self.by_term[block.terms[0] as usize * compared..][..compared];
+                AddColumn { factor: &room.factor[..rows], coefficients, odds }.run();
                 continue;
             }
-            let factor: f64 = block.dense.iter().map(|&column| dense[column]).product();
-            let row = &self.by_term[term as usize * compared..][..compared];
-            for (sum, coefficient) in log_odds.iter_mut().zip(row) {
-                *sum += factor * coefficient;
+            for row in 0..rows {
+                let term = block.term_of(values, first + row);
+                if term == NO_TERM {
+                    continue;
+                }
+                let coefficients = &self.by_term[term as usize * compared..][..compared];
+                for (category, coefficient) in coefficients.iter().enumerate() {
+                    odds[category * rows + row] += room.factor[row] * coefficient;
+                }
             }
         }
+        Softmax {
+            odds,
+            reference: self.reference,
+            probabilities: &mut room.probabilities[..self.categories * rows],
+            largest: &mut room.largest[..rows],
+            sum: &mut room.sum[..rows],
+        }
+        .run();
+    }
+}
+
+impl Block {
+    /// Products of the dense columns; 1 without any.
+    fn fill_factor(&self, dense: &[f64], factor: &mut [f64]) {
+        let rows = factor.len();
+        factor.fill(1.0);
+        for &column in &self.dense {
+            for (factor, value) in factor.iter_mut().zip(&dense[column * rows..][..rows]) {
+                *factor *= value;
+            }
+        }
+    }
+
+    /// The term that applies to a record.
+    fn term_of(&self, values: &[Vec<f64>], row: usize) -> u32 {
+        let cell = self
+            .level_fields
+            .iter()
+            .fold(0, |cell, &(field, levels)| cell * levels + values[field][row] as usize);
+        self.terms[cell]
+    }
+}
+
+impl Scored {
+    /// Takes a record over from its block; says whether its log-odds are finite.
+    fn take_over(&mut self, row: usize, place: usize, room: &Room) -> bool {
+        let (categories, compared) = (self.categories, self.categories - 1);
+        let log_odds = |category: usize| room.log_odds[category * room.rows + place];
+        if !(0..compared).all(|category| log_odds(category).is_finite()) {
+            return false;
+        }
+        for (category, slot) in self.log_odds[row * compared..][..compared].iter_mut().enumerate() {
+            *slot = log_odds(category);
+        }
+        for (category, slot) in self.probabilities[row * categories..][..categories].iter_mut().enumerate() {
+            *slot = room.probabilities[category * room.rows + place];
+        }
+        true
+    }
+}
+
+/// Room for the columns of a block, used again and again.
+struct Room {
+    rows: usize,
+    dense: Vec<f64>,
+    factor: Vec<f64>,
+    log_odds: Vec<f64>,
+    probabilities: Vec<f64>,
+    largest: Vec<f64>,
+    sum: Vec<f64>,
+}
+
+impl Room {
+    fn new(scorer: &Scorer, rows: usize) -> Self {
+        let columns = |count: usize| vec![0.0; count * rows];
+        Self {
+            rows,
+            dense: columns(scorer.design.dense().len()),
+            factor: columns(1),
+            log_odds: columns(scorer.categories - 1),
+            probabilities: columns(scorer.categories),
+            largest: columns(1),
+            sum: columns(1),
+        }
+    }
+
+    /// Makes ready for a block of so many records.
+    fn take(&mut self, rows: usize) {
+        self.rows = rows;
     }
 }
 
@@ -213,17 +300,8 @@ pub(crate) fn blocks(design: &Design) -> Vec<Block> {
 /// # Shapes
 /// `log_odds`: J-1, model order without the reference; `probabilities`: J, model order.
 pub fn probabilities_from_log_odds(log_odds: &[f64], reference: usize, probabilities: &mut [f64]) {
-    let largest = log_odds.iter().copied().fold(0.0, f64::max);
-    let mut sum = 0.0;
-    let mut compared = log_odds.iter();
-    for (category, slot) in probabilities.iter_mut().enumerate() {
-        let odds = if category == reference { 0.0 } else { compared.next().copied().unwrap_or(0.0) };
-        *slot = (odds - largest).exp();
-        sum += *slot;
-    }
-    for slot in probabilities {
-        *slot /= sum;
-    }
+    let (mut largest, mut sum) = ([0.0], [0.0]);
+    Softmax { odds: log_odds, reference, probabilities, largest: &mut largest, sum: &mut sum }.run();
 }
 
 /// Natural logarithms of the probabilities of all categories: finite for finite log-odds, also

@@ -87,15 +87,34 @@ fn blocks_equal_the_sum_over_terms() {
             (0..design.terms().len()).map(|t| ((t * 7 + row * 3) % 11) as f64 / 16.0 - 0.3).collect();
     }
     let scorer = Scorer::new(&model).unwrap();
-    let mut dense = vec![0.0; design.dense().len()];
-    let (mut by_blocks, mut terms) = ([0.0; 2], vec![0.0; design.terms().len()]);
-    for values in [[0.0, 1.5, 0.0, 2.0], [2.0, -3.0, 1.0, f64::NAN], [1.0, 0.25, 0.0, -1.0]] {
-        scorer.log_odds(&values, &mut dense, &mut by_blocks);
-        design.fill_row(&values, &mut dense, &mut terms);
-        for (found, category) in by_blocks.iter().zip(model.compared_categories()) {
+    let records = [[0.0, 1.5, 0.0, 2.0], [2.0, -3.0, 1.0, f64::NAN], [1.0, 0.25, 0.0, -1.0]];
+    let columns: Vec<Vec<f64>> =
+        (0..4).map(|field| records.iter().map(|record| record[field]).collect()).collect();
+    let mut room = Room::new(&scorer, records.len());
+    scorer.score_block(&columns, 0, &mut room);
+    let (mut dense, mut terms) = (vec![0.0; design.dense().len()], vec![0.0; design.terms().len()]);
+    for (row, values) in records.iter().enumerate() {
+        design.fill_row(values, &mut dense, &mut terms);
+        for (place, category) in model.compared_categories().enumerate() {
+            let found = room.log_odds[place * records.len() + row];
             let wanted: f64 = terms.iter().zip(&model.coefficients[category]).map(|(x, b)| x * b).sum();
             assert!((found - wanted).abs() < 1e-12, "{values:?}: {found} {wanted}");
         }
+    }
+}
+
+#[test]
+fn a_record_has_the_same_bits_alone_and_among_others() {
+    let scorer = Scorer::new(&programme()).unwrap();
+    let levels = ["low", "middle", "high", "top"];
+    let rows: Vec<(&str, f64)> =
+        (0..500).map(|row| (levels[row % 4], 20.0 + (row as f64 * 0.717).sin() * 45.0)).collect();
+    let together = scorer.score(&batch(&rows));
+    for (row, record) in rows.iter().enumerate() {
+        let alone = scorer.score(&batch(&[*record]));
+        let bits = |p: &[f64]| p.iter().map(|p| p.to_bits()).collect::<Vec<_>>();
+        assert_eq!(bits(alone.probabilities_of(0)), bits(together.probabilities_of(row)), "{record:?}");
+        assert_eq!(bits(alone.log_odds_of(0)), bits(together.log_odds_of(row)), "{record:?}");
     }
 }
 

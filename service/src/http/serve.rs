@@ -16,7 +16,7 @@ use crate::retention::first_day_kept;
 /// How often what other processes published, and new outcomes, are looked for.
 const LOOK_EVERY: Duration = Duration::from_secs(2);
 /// How often raw records are looked for that are older than what is kept.
-const PRUNE_EVERY: Duration = Duration::from_secs(24 * 60 * 60);
+const PRUNE_EVERY: Duration = Duration::from_hours(24);
 
 /// Serves until `stop` is ready; then finishes what was accepted.
 ///

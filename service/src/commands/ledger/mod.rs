@@ -60,17 +60,12 @@ fn backup(config: &Config, arguments: &LedgerBackupArgs) -> anyhow::Result<Done>
 }
 
 fn restore_copy(config: &Config, arguments: &LedgerRestoreArgs) -> anyhow::Result<Done> {
-    let path = sqlite_file(&ledger_url(config)?)?;
+    let LedgerUrl::Sqlite(path) = ledger_url(config)? else {
+        return Err(kilter_ledger::LedgerError::CopiedOtherwise.into());
+    };
     restore(&arguments.copy, &path)?;
     say(format_args!("restored to {}", path.display()))?;
     Ok(Done::Well)
-}
-
-/// The file of a ledger that has one.
-fn sqlite_file(url: &LedgerUrl) -> anyhow::Result<std::path::PathBuf> {
-    match url {
-        LedgerUrl::Sqlite(path) => Ok(path.clone()),
-    }
 }
 
 fn prune(config: &Config, arguments: &LedgerPruneArgs) -> anyhow::Result<Done> {
