@@ -205,7 +205,7 @@ impl Design {
     pub(crate) fn fill_dense_column(&self, column: usize, values: &[f64], slots: &mut [f64]) {
         match self.dense[column] {
             DenseColumn::Basis { field, basis } if self.is_plain(field, basis) => {
-                slots.copy_from_slice(values)
+                slots.copy_from_slice(values);
             }
             DenseColumn::Basis { field, basis } => {
                 for (slot, value) in slots.iter_mut().zip(values) {

@@ -7,5 +7,7 @@ mod drop_folder;
 mod fit_commands;
 mod fits;
 mod ledger_commands;
+mod live;
 mod service;
+mod sql;
 mod support;
