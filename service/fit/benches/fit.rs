@@ -30,9 +30,8 @@ fn main() -> Result<(), Box<dyn Error>> {
         println!("give the file of a table that tests/bench/fit has written");
         return Ok(());
     };
-    let number = |place: usize, default: usize| {
-        arguments.get(place).map_or(Ok(default), |text| text.parse::<usize>())
-    };
+    let number =
+        |place: usize, default: usize| arguments.get(place).map_or(Ok(default), |text| text.parse::<usize>());
     let (runs, keep_bytes) = (number(1, 1)?, number(2, FitSettings::default().keep_bytes)?);
     let mut table = Table::read(path)?;
     let plan = table.plan()?;
@@ -78,13 +77,16 @@ impl Table {
     }
 
     fn plan(&self) -> Result<Plan, Box<dyn Error>> {
-        let mut text = "name = \"bench\"\n[data]\nfiles = [\"x\"]\n[outcome]\nfield = \"y\"\nreference = \"0\"\n"
-            .to_owned();
+        let mut text =
+            "name = \"bench\"\n[data]\nfiles = [\"x\"]\n[outcome]\nfield = \"y\"\nreference = \"0\"\n"
+                .to_owned();
         for number in 0..self.numbers.len() {
             text.push_str(&format!("[[field]]\nname = \"x{number}\"\nkind = \"number\"\n"));
         }
         for number in 0..self.levels.len() - 1 {
-            text.push_str(&format!("[[field]]\nname = \"g{number}\"\nkind = \"levels\"\nreference = \"0\"\n"));
+            text.push_str(&format!(
+                "[[field]]\nname = \"g{number}\"\nkind = \"levels\"\nreference = \"0\"\n"
+            ));
         }
         Plan::from_toml(&text).map_err(Into::into)
     }

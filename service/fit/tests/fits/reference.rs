@@ -146,7 +146,7 @@ fn check_predictions(fit: &str, fitted: &Fitted, expected: &Value) {
     let scorer = Scorer::new(&fitted.model).unwrap();
     let intervals = ProbabilityIntervals::new(&fitted.model, 0.95).unwrap();
     for prediction in expected.as_array().unwrap() {
-        let inputs = prediction["inputs"].as_object().unwrap();
+        let inputs = prediction.get("inputs").unwrap_or(&prediction["profile"]).as_object().unwrap();
         let cell = |value: &Value| value.as_str().map_or_else(|| value.to_string(), String::from);
         let record = Table {
             header: inputs.keys().cloned().collect(),
@@ -342,6 +342,20 @@ fn sampling_weights_of_a_survey() {
 fn fits_agree_with_the_reference() {
     for (folder, data, name) in FITS {
         check_fit(folder, data, name);
+    }
+}
+
+/// Intervals on grids that go beyond the rows of the fit.
+#[test]
+fn prediction_intervals_on_a_grid() {
+    for (folder, fit, grid) in
+        [("hsb2", "hsb2_ses_write", "predict_hsb2"), ("womenlf", "womenlf_main", "predict_womenlf")]
+    {
+        let plan = plan(&toml_of(&json(&format!("{folder}/{fit}.json"))));
+        let fitted = fitted(&plan, &Table::read(&format!("{folder}/{folder}.csv")));
+        let expected = &json(&format!("{folder}/{grid}.json"))["expected"];
+        assert!(expected.as_array().unwrap().len() > 3);
+        check_predictions(grid, &fitted, expected);
     }
 }
 
