@@ -225,6 +225,8 @@ pub(crate) enum LedgerCommand {
     Backup(LedgerBackupArgs),
     /// Make the ledger of a copy; there must be none yet
     Restore(LedgerRestoreArgs),
+    /// Move the ledger from its SQLite file to a PostgreSQL data base; stop the service before
+    Move(LedgerMoveArgs),
     /// Remove raw records and outcomes by age; summaries stay
     Prune(LedgerPruneArgs),
     /// Write one row per record: id, version, time, probabilities, outcome, observed_at
@@ -244,6 +246,12 @@ pub(crate) struct LedgerBackupArgs {
 pub(crate) struct LedgerRestoreArgs {
     /// The copy
     pub(crate) copy: PathBuf,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct LedgerMoveArgs {
+    /// Address of an empty data base, such as `postgres://kilter@db.example/kilter`
+    pub(crate) to: String,
 }
 
 #[derive(Debug, Args)]

@@ -120,7 +120,8 @@ impl Default for ModelsConfig {
 #[derive(Debug, Clone, Deserialize, JsonSchema)]
 #[serde(deny_unknown_fields, default)]
 pub(crate) struct LedgerConfig {
-    /// Where the ledger is: `sqlite:` and a path.
+    /// Where the ledger is: `sqlite:` and a path, or an address such as
+    /// `postgres://kilter@db.example/kilter`.
     pub(crate) url: String,
     /// How long raw records and outcomes are kept, by record time; summaries stay. For ever, if left
     /// out. The running service removes older ones once a day.

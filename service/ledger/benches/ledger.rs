@@ -1,10 +1,12 @@
 //! How fast the ledger keeps and matches, with random ids, every commit synced to the disk.
 //!
-//! `cargo bench -p kilter-ledger -- [ROWS] [BATCH] [FOLDER] [PARTS]`: bulk by batches until ROWS, then
+//! `cargo bench -p kilter-ledger -- [ROWS] [BATCH] [PLACE] [PARTS]`: bulk by batches until ROWS, then
 //! single records from 64 threads, then outcomes in random order, then reading summaries; PARTS, such
 //! as `single,match`, leaves out parts after the first. For each part a line with the rate, for bulk
 //! a line for each tenth. Beside it a floor: the bytes of the same records appended to a file and
-//! synced with the same batches. The rate by the writer's processor time is what a machine would do
+//! synced with the same batches. PLACE is a folder, or the address of an empty PostgreSQL data base; the
+//! floor is then a plain COPY of the same rows by the same batches, into a table without an index and
+//! into one with a primary key on the ids. The rate by the writer's processor time is what a machine would do
 //! that does nothing else (where the system tells it).
 
 #![expect(clippy::print_stdout, reason = "the figures are what this program is for")]
@@ -19,6 +21,9 @@ use kilter_ledger::{
     VersionRow, VersionState,
 };
 use kilter_model::ModelFile;
+use postgres::binary_copy::BinaryCopyInWriter;
+use postgres::types::Type;
+use postgres::{Client, NoTls};
 use serde_json::json;
 
 const MODEL: &str = "attempt";
@@ -214,6 +219,35 @@ fn floor(folder: &Path, rows: u64, batch: u64) {
     std::fs::remove_file(path).expect("the file is removed");
 }
 
+/// Copies the same rows into a table of one's own, and gives the rate.
+fn copy_floor(address: &str, version: &VersionRow, rows: u64, batch: u64, key: &str) {
+    let mut client = Client::connect(address, NoTls).expect("a connection");
+    let table = format!(
+        "DROP TABLE IF EXISTS plain; CREATE TABLE plain (id text {key}, time bigint, version text, \
+         log_odds bytea, inputs bytea, segment text)"
+    );
+    client.batch_execute(&table).expect("a table");
+    let types = [Type::TEXT, Type::INT8, Type::TEXT, Type::BYTEA, Type::BYTEA, Type::TEXT];
+    let bytes = |values: &[f64]| values.iter().flat_map(|value| value.to_le_bytes()).collect::<Vec<u8>>();
+    let mut seconds = 0.0;
+    for first in (0..rows).step_by(batch as usize) {
+        let records: Vec<NewRecord> = (first..(first + batch).min(rows)).map(record).collect();
+        let begun = Instant::now();
+        let copy = client.copy_in("COPY plain FROM STDIN (FORMAT binary)").expect("a copy");
+        let mut copy = BinaryCopyInWriter::new(copy, &types);
+        for record in &records {
+            let (log_odds, inputs) = (bytes(&record.log_odds), bytes(&record.inputs));
+            let version = &&version.fingerprint[..16];
+            copy.write(&[&record.id, &record.time, version, &log_odds, &inputs, &record.segments[0]])
+                .expect("a row");
+        }
+        copy.finish().expect("the copy ends");
+        seconds += begun.elapsed().as_secs_f64();
+    }
+    println!("floor, a plain COPY into a table {key}: {:.0} rows/s", rows as f64 / seconds);
+    client.batch_execute("DROP TABLE plain").expect("the table is removed");
+}
+
 fn main() {
     // Without this word the program is run as a test, of which it is none.
     let arguments: Vec<String> = std::env::args().skip(1).collect();
@@ -223,34 +257,47 @@ fn main() {
     let mut given = arguments.iter().filter(|argument| *argument != "--bench");
     let mut number = |otherwise: u64| given.next().and_then(|text| text.parse().ok()).unwrap_or(otherwise);
     let (rows, batch) = (number(1_000_000), number(100_000));
-    let folder = given.next().map_or_else(std::env::temp_dir, PathBuf::from);
+    let place = given.next().map_or_else(|| std::env::temp_dir().display().to_string(), String::clone);
     let parts = given.next().map_or("single,match,read", String::as_str);
-    let path = folder.join("kilter-ledger-bench.db");
-    for ending in ["db", "db-wal", "db-shm"] {
-        let _ = std::fs::remove_file(path.with_extension(ending));
-    }
-    floor(&folder, rows, batch);
-    let ledger = Ledger::open(&LedgerUrl::Sqlite(path.clone()), Settings::default()).expect("a ledger");
     let version = version();
+    if place.starts_with("postgres") {
+        let url = LedgerUrl::parse(&place, Path::new("/")).expect("an address");
+        copy_floor(&place, &version, rows, batch, "");
+        copy_floor(&place, &version, rows, batch, "PRIMARY KEY");
+        run(&url, &version, (rows, batch), parts);
+        return;
+    }
+    let folder = PathBuf::from(place);
+    let path = folder.join("kilter-ledger-bench.db");
+    let remove = || {
+        for ending in ["db", "db-wal", "db-shm"] {
+            let _ = std::fs::remove_file(path.with_extension(ending));
+        }
+    };
+    remove();
+    floor(&folder, rows, batch);
+    run(&LedgerUrl::Sqlite(path.clone()), &version, (rows, batch), parts);
+    println!("{} bytes a record", std::fs::metadata(&path).map_or(0, |metadata| metadata.len()) / rows);
+    remove();
+}
+
+fn run(url: &LedgerUrl, version: &VersionRow, (rows, batch): (u64, u64), parts: &str) {
+    let ledger = Ledger::open(url, Settings::default()).expect("a ledger");
     ledger
         .write(Job::Publish { version: version.clone(), who: "bench".into() })
         .expect("the version is published");
-    bulk(&ledger, &version, rows, batch);
+    bulk(&ledger, version, rows, batch);
     if parts.contains("single") {
-        singles(&ledger, &version, rows);
+        singles(&ledger, version, rows);
     }
     if parts.contains("match") {
         matching(&ledger, rows, batch);
     }
     if parts.contains("read") {
-        reading(&ledger, &version);
+        reading(&ledger, version);
     }
     drop(ledger);
     let begun = Instant::now();
-    let size = std::fs::metadata(&path).map_or(0, |metadata| metadata.len());
-    drop(Ledger::open(&LedgerUrl::Sqlite(path.clone()), Settings::default()).expect("a ledger"));
-    println!("opened again in {:.0} ms; {} bytes a record", begun.elapsed().as_secs_f64() * 1e3, size / rows);
-    for ending in ["db", "db-wal", "db-shm"] {
-        let _ = std::fs::remove_file(path.with_extension(ending));
-    }
+    drop(Ledger::open(url, Settings::default()).expect("a ledger"));
+    println!("opened again in {:.0} ms", begun.elapsed().as_secs_f64() * 1e3);
 }

@@ -42,6 +42,9 @@ pub enum LedgerError {
         /// Latest schema version that this build knows.
         known: u32,
     },
+    /// A later program has taken over the ledger while this one was running.
+    #[error("a later program has taken over the ledger; stop this one and start the later one in its place")]
+    LaterProgram,
     /// More is waiting to be written than the ledger takes at one time.
     #[error("the ledger has more to write than it takes at one time; try again in a moment")]
     Busy,
@@ -57,6 +60,28 @@ pub enum LedgerError {
     /// Reading or writing failed; nothing of the request was kept.
     #[error("the ledger failed: {0}")]
     Storage(Arc<rusqlite::Error>),
+    /// The data base cannot be reached.
+    #[error("could not reach ledger `{ledger}`: {reason}")]
+    Connect {
+        /// Its address, without any password.
+        ledger: String,
+        /// The cause.
+        reason: String,
+    },
+    /// The data base failed; nothing of the request was kept.
+    #[error("the ledger's data base failed: {}", crate::postgres::describe(.0))]
+    Database(Arc<postgres::Error>),
+    /// The connection to the data base was lost while a commit was under way, and nobody can tell
+    /// any more whether it was kept.
+    #[error(
+        "it is not known whether the ledger kept the request; send it again, which changes nothing if it did"
+    )]
+    Unknown,
+    /// A copy is made in another way.
+    #[error(
+        "a PostgreSQL ledger is copied with `pg_dump` and restored with `pg_restore`, which come with PostgreSQL"
+    )]
+    CopiedOtherwise,
     /// What is stored cannot be read back.
     #[error("the ledger holds {what} that cannot be read: {reason}")]
     Damaged {
@@ -103,6 +128,24 @@ pub enum LedgerError {
         /// Name of the model.
         model: String,
     },
+    /// A ledger is moved to where there is one already.
+    #[error("`{ledger}` holds a ledger already; name an empty data base")]
+    NotEmpty {
+        /// Its address, without any password.
+        ledger: String,
+    },
+    /// A ledger was moved, but not all of it arrived.
+    #[error(
+        "{arrived} of {sent} rows of `{table}` arrived in the new ledger; keep the old one, and move it again"
+    )]
+    NotAllMoved {
+        /// The table.
+        table: &'static str,
+        /// Rows that were sent.
+        sent: u64,
+        /// Rows that are there.
+        arrived: u64,
+    },
     /// A copy of the ledger could not be written or read.
     #[error("could not copy the ledger to `{}`: {reason}", path.display())]
     Copy {
@@ -119,7 +162,30 @@ impl From<rusqlite::Error> for LedgerError {
     }
 }
 
+impl From<postgres::Error> for LedgerError {
+    fn from(error: postgres::Error) -> Self {
+        Self::Database(Arc::new(error))
+    }
+}
+
 impl LedgerError {
+    /// Sending rows failed; the error of the connection is wrapped in one of writing.
+    pub(crate) fn sending(error: std::io::Error) -> Self {
+        match error.downcast::<postgres::Error>() {
+            Ok(error) => error.into(),
+            Err(error) => Self::damaged("rows", error),
+        }
+    }
+
+    /// Whether it is the store that fails, so that other requests would fail in the same way.
+    pub(crate) fn is_of_the_store(&self) -> bool {
+        match self {
+            Self::Connect { .. } | Self::Unknown | Self::Closed => true,
+            Self::Database(error) => crate::postgres::is_of_the_server(error),
+            _ => false,
+        }
+    }
+
     pub(crate) fn damaged(what: impl Into<String>, reason: impl std::fmt::Display) -> Self {
         Self::Damaged { what: what.into(), reason: reason.to_string() }
     }

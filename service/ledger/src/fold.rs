@@ -29,6 +29,7 @@ pub fn day_of(micros: i64) -> i64 {
 #[derive(Debug)]
 pub(crate) struct FoldedVersion {
     pub(crate) number: i64,
+    pub(crate) fingerprint: String,
     pub(crate) frame: Frame,
     pub(crate) segments: Vec<String>,
     coder: Coder,
@@ -47,7 +48,14 @@ impl FoldedVersion {
     pub(crate) fn of_model(number: i64, model: ModelFile) -> Result<Self, LedgerError> {
         let design = Design::of_model(&model).map_err(|error| LedgerError::damaged("a model file", error))?;
         let frame = Frame::new(&model).map_err(|error| LedgerError::damaged("a model file", error))?;
-        Ok(Self { number, frame, coder: Coder::new(&model.fields), design, segments: model.monitor.segments })
+        Ok(Self {
+            number,
+            fingerprint: model.fingerprint,
+            frame,
+            coder: Coder::new(&model.fields),
+            design,
+            segments: model.monitor.segments,
+        })
     }
 
     /// The terms of a record without the intercept: where the records have moved in them, the

@@ -9,6 +9,7 @@ use std::sync::{Arc, Mutex, MutexGuard, PoisonError};
 use kilter_drift::Summary;
 
 use crate::error::LedgerError;
+use crate::postgres::PostgresStore;
 use crate::sqlite::SqliteStore;
 use crate::store::{Job, Reader, Reply, Store};
 use crate::types::{
@@ -71,6 +72,9 @@ impl Ledger {
     pub fn open(url: &LedgerUrl, settings: Settings) -> Result<Self, LedgerError> {
         match url {
             LedgerUrl::Sqlite(path) => Self::with_store(Box::new(SqliteStore::open(path)?), settings),
+            LedgerUrl::Postgres(address) => {
+                Self::with_store(Box::new(PostgresStore::open(address)?), settings)
+            }
         }
     }
 
@@ -292,7 +296,8 @@ impl Ledger {
     /// is replaced when the copy is whole.
     ///
     /// # Errors
-    /// [`LedgerError::Copy`] where the copy cannot be written.
+    /// [`LedgerError::Copy`] where the copy cannot be written, and [`LedgerError::CopiedOtherwise`]
+    /// for a PostgreSQL ledger: `pg_dump` copies it, online and consistent.
     pub fn backup(&self, path: &Path) -> Result<(), LedgerError> {
         self.read(|reader| reader.backup(path))
     }

@@ -10,12 +10,20 @@
 //! * Raw records may be removed by age; the summaries of their days stay and are final. A record or
 //!   outcome that comes later for such a day is kept, but is in no summary.
 //!
+//! A ledger is a SQLite file, for one machine, or a PostgreSQL data base that the replicas of a fleet
+//! share; [`move_from_sqlite`] brings it from the one to the other. A file is copied with
+//! [`Ledger::backup`] while it is written to; a data base with `pg_dump`.
+//!
 //! The crate knows no clock: whoever calls says when things happen.
 
+mod acts;
+mod codes;
 mod compare;
 mod error;
 mod fold;
 mod ledger;
+mod postgres;
+mod recomputed;
 mod sqlite;
 mod store;
 #[cfg(test)]
@@ -24,6 +32,7 @@ mod types;
 mod url;
 mod writer;
 
+pub use crate::postgres::{Moved, PostgresAddress, move_from_sqlite};
 pub use error::LedgerError;
 pub use fold::{MOST_SEGMENT_VALUES, OTHER_SEGMENTS, day_of};
 pub use ledger::{Ledger, Settings};

@@ -41,7 +41,8 @@ pub enum Job {
         act: Act,
     },
     /// Forget records by their ids: record, scores, outcome and its history, and their share of the
-    /// summaries. The audit trail says that it was done, but no ids.
+    /// summaries. The audit trail says that it was done, but no ids. SQLite overwrites what it
+    /// deletes; PostgreSQL may have it in its files until they are vacuumed and its log is reused.
     Delete {
         /// Name of the model.
         model: String,
@@ -192,6 +193,7 @@ pub trait Reader: Send {
     /// Compares all summaries with what the raw records give: counts exactly, sums to 1e-9.
     fn verify(&self) -> Result<Vec<VerifyDifference>, LedgerError>;
 
-    /// Writes a consistent copy of the whole ledger while writing goes on.
+    /// Writes a consistent copy of the whole ledger while writing goes on;
+    /// [`LedgerError::CopiedOtherwise`] where the store has a way of its own.
     fn backup(&self, path: &Path) -> Result<(), LedgerError>;
 }

@@ -104,11 +104,15 @@ fn write_all(
 }
 
 /// Commits jobs together. Where that fails, each is tried by itself, so that one that cannot be
-/// written does not take the others with it.
+/// written does not take the others with it; unless it is the store that cannot be reached.
 fn commit(store: &mut dyn Store, jobs: &[Job], waiting: Vec<Done>) {
     match store.commit(jobs) {
         Ok(replies) => waiting.into_iter().zip(replies).for_each(|(done, reply)| done(Ok(reply))),
-        Err(error) if jobs.len() == 1 => waiting.into_iter().for_each(|done| done(Err(error.clone()))),
+        Err(error) if jobs.len() == 1 || error.is_of_the_store() => {
+            for done in waiting {
+                done(Err(error.clone()));
+            }
+        }
         Err(_) => {
             for (job, done) in jobs.iter().zip(waiting) {
                 let reply = store.commit(std::slice::from_ref(job));

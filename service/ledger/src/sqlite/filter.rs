@@ -65,7 +65,7 @@ impl Filter {
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::sqlite::codes::id_hash;
+    use crate::codes::id_hash;
 
     #[test]
     fn holds_all_its_keys_and_few_others() {

@@ -12,8 +12,8 @@ use std::hash::{BuildHasherDefault, Hasher};
 
 use rusqlite::{Connection, Row, params};
 
-use super::codes::{id_hash, integers_from_bytes, integers_to_bytes};
 use super::filter::Filter;
+use crate::codes::{id_hash, integers_from_bytes, integers_to_bytes};
 use crate::error::LedgerError;
 
 /// What an index finds.

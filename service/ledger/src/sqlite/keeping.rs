@@ -4,9 +4,9 @@ use std::sync::Arc;
 
 use rusqlite::{CachedStatement, params};
 
-use super::codes::{floats_to_bytes, id_hash, segments_to_text};
 use super::index::Kind;
 use super::writing::{Observed, Writing};
+use crate::codes::{floats_to_bytes, id_hash, segments_to_text};
 use crate::error::LedgerError;
 use crate::fold::{Case, Event, FoldedVersion, day_of};
 use crate::types::{NewRecord, Records, ShadowScore, ShadowScores};

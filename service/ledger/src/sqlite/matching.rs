@@ -2,10 +2,10 @@
 
 use rusqlite::params;
 
-use super::codes::id_hash;
 use super::index::Kind;
 use super::rows::{StoredOutcome, StoredRecord};
 use super::writing::{Observed, Writing};
+use crate::codes::id_hash;
 use crate::error::LedgerError;
 use crate::fold::day_of;
 use crate::types::{NewOutcome, OutcomeState, Outcomes};

@@ -6,7 +6,7 @@
 
 mod backup;
 mod checkpoints;
-mod codes;
+
 mod files;
 mod filter;
 mod index;
@@ -15,6 +15,7 @@ mod matching;
 mod names;
 mod raw;
 mod reader;
+mod rebuild;
 mod removal;
 mod rows;
 mod schema;
@@ -29,8 +30,6 @@ use rusqlite::{Connection, TransactionBehavior};
 
 pub use self::backup::restore;
 use self::checkpoints::Checkpoints;
-#[cfg(test)]
-pub(crate) use self::codes::id_hash;
 use self::index::{IdIndex, Kind};
 use self::names::Names;
 use self::reader::SqliteReader;
@@ -39,6 +38,18 @@ use self::writing::{Writing, horizon};
 use crate::error::LedgerError;
 use crate::fold::Windows;
 use crate::store::{Job, Reader, Reply, Store};
+
+/// Opens a file that is to be read whole: brought up to date, and closed to other writers until the
+/// transaction ends that is begun here.
+pub(crate) fn open_to_move(path: &Path) -> Result<Connection, LedgerError> {
+    if !path.exists() {
+        return Err(LedgerError::NoLedger { path: path.to_owned() });
+    }
+    let mut connection = schema::open_for_writing(path)?;
+    rebuild::rebuild(&mut connection)?;
+    connection.execute_batch("BEGIN IMMEDIATE")?;
+    Ok(connection)
+}
 
 /// Summaries kept at hand between commits; beyond it all are forgotten and fetched when needed.
 const MOST_CACHED_WINDOWS: usize = 4096;
@@ -128,7 +139,8 @@ impl SqliteStore {
 
     /// Opens a ledger that writes a run for that many rows.
     pub(crate) fn with_runs(path: &Path, rows_per_run: usize) -> Result<Self, LedgerError> {
-        let connection = schema::open_for_writing(path)?;
+        let mut connection = schema::open_for_writing(path)?;
+        rebuild::rebuild(&mut connection)?;
         let checkpoints = Checkpoints::start(path)?;
         let mut store =
             Self { path: path.to_owned(), connection, cache: Cache::new(), checkpoints, rows_per_run };

@@ -5,7 +5,7 @@ use std::sync::Arc;
 
 use rusqlite::{Connection, OptionalExtension, params};
 
-use super::codes::{stream_columns, stream_from_columns};
+use crate::codes::{stream_columns, stream_from_columns};
 use crate::error::LedgerError;
 use crate::fold::{FoldedVersion, StreamName, Streams};
 

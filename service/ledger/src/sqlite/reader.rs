@@ -3,9 +3,10 @@
 use std::ops::ControlFlow;
 use std::path::{Path, PathBuf};
 
+use kilter_drift::SUMMARY_VERSION;
 use rusqlite::{Connection, OptionalExtension, Row, params};
 
-use super::codes::{stream_columns, stream_from_columns, summary_from_bytes};
+use crate::codes::{stream_columns, stream_from_columns, summary_from_bytes};
 use super::index::{Kind, search};
 use super::names::category_name;
 use super::rows::{StoredOutcome, StoredRecord, load_outcome, load_record, raw_outcome};
@@ -154,7 +155,7 @@ impl Reader for SqliteReader {
         let columns = stream.map(stream_columns);
         let mut statement = self.connection.prepare_cached(
             "SELECT day, field, value, summary FROM stream JOIN summary ON summary.stream = stream.number \
-             WHERE version = ?1 AND day BETWEEN ?2 AND ?3 \
+             WHERE stream.version = ?1 AND summary.version = ?6 AND day BETWEEN ?2 AND ?3 \
              AND (?4 IS NULL OR (field = ?4 AND value = ?5)) ORDER BY day, field, value",
         )?;
         let parameters = params![
@@ -162,7 +163,8 @@ impl Reader for SqliteReader {
             days[0],
             days[1],
             columns.map(|(field, _)| field),
-            columns.map(|(_, value)| value)
+            columns.map(|(_, value)| value),
+            SUMMARY_VERSION
         ];
         let mut rows = statement.query(parameters)?;
         let mut windows = Vec::new();
@@ -182,7 +184,7 @@ impl Reader for SqliteReader {
             .connection
             .prepare_cached(
                 "SELECT min(day), max(day) FROM stream JOIN summary ON summary.stream = stream.number \
-                 WHERE version = ? AND field = ''",
+                 WHERE stream.version = ? AND field = ''",
             )?
             .query_row([version], |row| Ok((row.get(0)?, row.get(1)?)))?;
         Ok(days.0.zip(days.1).map(|(first, last)| [first, last]))

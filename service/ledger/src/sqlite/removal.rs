@@ -2,11 +2,11 @@
 
 use rusqlite::{Connection, params};
 
-use super::codes::id_hash;
 use super::index::{Kind, drop_runs_before};
 use super::rows::StoredRecord;
 use super::spans::Spans;
 use super::writing::{HORIZON, Observed, Writing};
+use crate::codes::id_hash;
 use crate::error::LedgerError;
 use crate::fold::{Case, Event, day_of};
 use crate::types::{Act, Pruned};

@@ -2,7 +2,7 @@
 
 use rusqlite::{Connection, Row};
 
-use super::codes::{floats_from_bytes, segments_from_text};
+use crate::codes::{floats_from_bytes, segments_from_text};
 use crate::error::LedgerError;
 use crate::types::{NewRecord, RawOutcome, RawRecord, ShadowScore};
 

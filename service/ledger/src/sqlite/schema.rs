@@ -9,7 +9,7 @@ use rusqlite::{Connection, OpenFlags, TransactionBehavior};
 use crate::error::LedgerError;
 
 /// Each entry brings the schema one version forward; the first makes it.
-const MIGRATIONS: [&str; 1] = [include_str!("schema_1.sql")];
+const MIGRATIONS: [&str; 2] = [include_str!("schema_1.sql"), include_str!("schema_2.sql")];
 /// The schema version that this build writes.
 const SCHEMA_VERSION: u32 = MIGRATIONS.len() as u32;
 /// Marks a file as a ledger, so that no other program's file is taken for one ("kled").

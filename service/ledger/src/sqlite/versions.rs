@@ -1,25 +1,12 @@
 //! Versions: published, promoted, rolled back, retired; each with a line in the audit trail.
 
-use kilter_model::ModelFile;
 use rusqlite::{OptionalExtension, params};
 
 use super::names::live_number;
 use super::writing::Writing;
+use crate::acts::{Line, PROMOTED, PUBLISHED_LIVE, RETIRED, ROLLED_BACK, check_file, deletion, publication};
 use crate::error::LedgerError;
-use crate::fold::FoldedVersion;
 use crate::types::{Act, VersionChange, VersionRow, VersionState};
-
-/// What the audit trail says of acts that make a version live.
-const PUBLISHED_LIVE: &str = "publish as live";
-const PROMOTED: &str = "promote";
-
-/// A line of the audit trail before it is written.
-struct Line<'a> {
-    model: i64,
-    what: &'a str,
-    from: Option<i64>,
-    to: Option<i64>,
-}
 
 impl Writing<'_> {
     pub(super) fn publish(&mut self, version: &VersionRow, who: &str) -> Result<(), LedgerError> {
@@ -41,13 +28,8 @@ impl Writing<'_> {
         )?;
         self.cache.names.forget_live();
         let to = self.version_of((model, &version.model), &version.fingerprint)?.number;
-        let what = match version.state {
-            VersionState::Live => PUBLISHED_LIVE,
-            VersionState::Shadow => "publish as shadow",
-            VersionState::Retired => "publish as retired",
-        };
         let act = Act { at: version.published_at, who: who.to_owned(), why: String::new() };
-        self.write_line(&act, &Line { model, what, from, to: Some(to) })
+        self.write_line(&act, &Line { model, what: publication(version.state), from, to: Some(to) })
     }
 
     pub(super) fn change_version(
@@ -63,7 +45,7 @@ impl Writing<'_> {
                 let to = self.version_of((model, model_name), fingerprint)?.number;
                 (PROMOTED, to, VersionState::Live)
             }
-            VersionChange::Rollback => ("roll back", self.former_live(model_name, from)?, VersionState::Live),
+            VersionChange::Rollback => (ROLLED_BACK, self.former_live(model_name, from)?, VersionState::Live),
             VersionChange::Retire(fingerprint) => {
                 let to = self.version_of((model, model_name), fingerprint)?.number;
                 if Some(to) == from {
@@ -72,7 +54,7 @@ impl Writing<'_> {
                         version: fingerprint.clone(),
                     });
                 }
-                ("retire", to, VersionState::Retired)
+                (RETIRED, to, VersionState::Retired)
             }
         };
         if state == VersionState::Live {
@@ -91,8 +73,7 @@ impl Writing<'_> {
         act: &Act,
         deleted: usize,
     ) -> Result<(), LedgerError> {
-        let what = format!("delete {deleted} records");
-        self.write_line(act, &Line { model, what: &what, from: None, to: None })
+        self.write_line(act, &Line { model, what: &deletion(deleted), from: None, to: None })
     }
 
     fn write_line(&self, act: &Act, line: &Line) -> Result<(), LedgerError> {
@@ -147,14 +128,4 @@ impl Writing<'_> {
             },
         )?)
     }
-}
-
-/// Refuses a file that the ledger could not fold by, or that is not what it is called.
-fn check_file(version: &VersionRow) -> Result<(), LedgerError> {
-    let refused = |reason: String| LedgerError::ModelFile { model: version.model.clone(), reason };
-    let model = ModelFile::from_json(&version.file).map_err(|error| refused(error.to_string()))?;
-    if model.name != version.model || model.fingerprint != version.fingerprint {
-        return Err(refused(format!("the file is of `{}` {}", model.name, model.fingerprint)));
-    }
-    FoldedVersion::of_model(0, model).map(|_| ()).map_err(|error| refused(error.to_string()))
 }

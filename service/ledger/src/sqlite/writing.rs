@@ -3,11 +3,11 @@
 use std::collections::BTreeMap;
 use std::sync::Arc;
 
-use kilter_drift::Summary;
+use kilter_drift::{SUMMARY_VERSION, Summary};
 use rusqlite::{Connection, OptionalExtension, Transaction, params};
 
 use super::Cache;
-use super::codes::{summary_from_bytes, summary_to_bytes};
+use crate::codes::{summary_from_bytes, summary_to_bytes};
 use super::rows::{StoredOutcome, StoredRecord, load_outcome, load_record, load_shadows};
 use crate::error::LedgerError;
 use crate::fold::{Case, Event, FoldedVersion, WindowKey};
@@ -57,11 +57,11 @@ impl<'a> Writing<'a> {
     /// Writes what was changed on the way.
     pub(super) fn finish(self) -> Result<(), LedgerError> {
         let mut statement = self.transaction.prepare_cached(
-            "INSERT INTO summary (stream, day, summary) VALUES (?, ?, ?) \
-             ON CONFLICT DO UPDATE SET summary = excluded.summary",
+            "INSERT INTO summary (stream, day, summary, version) VALUES (?, ?, ?, ?) \
+             ON CONFLICT DO UPDATE SET summary = excluded.summary, version = excluded.version",
         )?;
         for ((stream, day), summary) in self.cache.windows.changed() {
-            statement.execute(params![stream, day, summary_to_bytes(summary)?])?;
+            statement.execute(params![stream, day, summary_to_bytes(summary)?, SUMMARY_VERSION])?;
         }
         self.cache.spans.write(self.transaction)?;
         let mut statement = self.transaction.prepare_cached(

@@ -1,12 +1,19 @@
 //! The suite that every store passes, and tests of single parts.
 
+mod cluster;
 mod crashes;
+mod disk;
+mod fleet;
 mod handle;
+mod migrations;
+mod moving;
 mod order;
 mod parcels;
 mod places;
+mod processes;
 mod suite;
 mod suite_removal;
+mod suite_upgrades;
 mod suite_versions;
 
 /// Makes tests of the suite for a kind of place in which ledgers are kept.
@@ -42,6 +49,8 @@ macro_rules! whole_suite {
                 two_handles_see_each_other,
                 a_failure_hides_nothing_that_others_write,
                 damage_is_found,
+                the_clock_may_go_backwards,
+                ids_may_be_of_any_characters,
             }
             suite_versions {
                 one_version_is_live,
@@ -59,8 +68,15 @@ macro_rules! whole_suite {
                 what_comes_late_for_a_pruned_day_is_kept_but_not_folded,
                 numbers_are_not_given_twice,
             }
+            suite_upgrades {
+                summaries_of_an_earlier_program_are_computed_anew,
+            }
             order {
                 any_order_gives_the_same,
+            }
+            crashes {
+                what_was_acknowledged_survives_kills,
+                processes_share_a_ledger,
             }
         }
     };
@@ -68,4 +84,8 @@ macro_rules! whole_suite {
 
 mod sqlite {
     whole_suite!(crate::tests::places::SqlitePlace);
+}
+
+mod postgres {
+    whole_suite!(crate::tests::places::PostgresPlace);
 }

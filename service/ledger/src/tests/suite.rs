@@ -348,3 +348,48 @@ pub(super) fn damage_is_found(place: &dyn Place) {
     assert!(lost.iter().any(|difference| difference.reason.contains("6 records")), "{lost:?}");
     assert!(lost.iter().any(|difference| difference.reason.starts_with(".scored")), "{lost:?}");
 }
+
+/// Times of records, of outcomes and of receipt that go backwards: everything is kept and counted.
+pub(super) fn the_clock_may_go_backwards(place: &dyn Place) {
+    let ledger = place.open();
+    let live = with_live(&ledger);
+    for i in (0..12_u32).rev() {
+        let time = START + i64::from(i) * 8 * HOUR;
+        let mut new = records(&live, vec![record(&format!("S-{i}"), time, i)]);
+        new.received = time - DAY;
+        assert_eq!(ledger.write(Job::Records(new)).unwrap(), Reply::Records(vec![false]));
+        let mut known = super::parcels::outcomes(vec![outcome(&format!("S-{i}"), "carded", time - 2 * DAY)]);
+        known.received = time - 3 * DAY;
+        let state = ledger.write(Job::Outcomes(known)).unwrap();
+        assert_eq!(state, Reply::Outcomes(vec![OutcomeState::Matched]));
+    }
+    let windows = ledger.summaries_of(MODEL, &live.fingerprint, &Stream::All, ALWAYS).unwrap();
+    let counts: Vec<f64> = windows.iter().map(|window| window.summary.outcomes()).collect();
+    assert_eq!(counts, [3.0; 4]);
+    let before_1970 = vec![record("S-old", -5 * DAY - 1, 1), record("S-first", i64::MIN / 2, 2)];
+    assert_eq!(keep(&ledger, &live, before_1970), [false, false]);
+    assert_eq!(ledger.record(MODEL, "S-old").unwrap().unwrap().time, -5 * DAY - 1);
+    verified(&ledger);
+}
+
+pub(super) fn ids_may_be_of_any_characters(place: &dyn Place) {
+    let ledger = place.open();
+    let live = with_live(&ledger);
+    let ids = ["", " ", "a\0b", "a\u{E000}0b", "\u{202E}S-1", "'; DROP TABLE record; --", "\\N", "\n\t"];
+    let with_segment = |id: &str| NewRecord { segments: vec![id.into()], ..record(id, START, 1) };
+    let new = ids.iter().map(|id| with_segment(id)).collect();
+    assert_eq!(keep(&ledger, &live, new), [false; 8]);
+    for id in ids {
+        assert_eq!(ledger.record(MODEL, id).unwrap().unwrap().id, id);
+        assert_eq!(keep(&ledger, &live, vec![with_segment(id)]), [true], "{id:?}");
+        let now = vec![outcome(id, "carded", START), outcome(&format!("{id}?"), "carded", START)];
+        assert_eq!(observe(&ledger, now), [OutcomeState::Matched, OutcomeState::Waiting], "{id:?}");
+    }
+    let streams = ledger.streams(MODEL, &live.fingerprint).unwrap();
+    assert!(streams.contains(&depot("a\0b")) && streams.contains(&depot("a\u{E000}0b")), "{streams:?}");
+    drop(ledger);
+    let ledger = place.open();
+    keep(&ledger, &live, vec![NewRecord { segments: vec!["a\0b".into()], ..record("S-2", START, 1) }]);
+    assert_eq!(scored(&ledger, &live, &depot("a\0b")), 2.0);
+    verified(&ledger);
+}

@@ -6,11 +6,12 @@ pub(super) use export::is_version;
 
 use std::path::Path;
 
-use kilter_ledger::{Act, Job, LedgerUrl, Reply, Stream, restore};
+use kilter_ledger::{Act, Job, LedgerUrl, Reply, Stream, VerifyDifference, move_from_sqlite, restore};
 
 use super::{ledger_url, open_ledger};
 use crate::cli::{
-    LedgerArgs, LedgerBackupArgs, LedgerCommand, LedgerDeleteArgs, LedgerPruneArgs, LedgerRestoreArgs,
+    LedgerArgs, LedgerBackupArgs, LedgerCommand, LedgerDeleteArgs, LedgerMoveArgs, LedgerPruneArgs,
+    LedgerRestoreArgs,
 };
 use crate::clock::Clock;
 use crate::config::Config;
@@ -26,6 +27,7 @@ pub(crate) fn run(arguments: &LedgerArgs) -> anyhow::Result<Done> {
         LedgerCommand::Verify => verify(&config),
         LedgerCommand::Backup(own) => backup(&config, own),
         LedgerCommand::Restore(own) => restore_copy(&config, own),
+        LedgerCommand::Move(own) => move_ledger(&config, own),
         LedgerCommand::Prune(own) => prune(&config, own),
         LedgerCommand::Export(own) => export::run(&config, own),
         LedgerCommand::Delete(own) => delete(&config, own),
@@ -39,7 +41,15 @@ pub(crate) fn user() -> String {
 
 fn verify(config: &Config) -> anyhow::Result<Done> {
     let differences = open_ledger(config)?.verify()?;
-    for difference in &differences {
+    tell_differences(&differences)?;
+    if differences.is_empty() {
+        say("the summaries are what the records give")?;
+    }
+    Ok(Done::found(!differences.is_empty()))
+}
+
+fn tell_differences(differences: &[VerifyDifference]) -> std::io::Result<()> {
+    for difference in differences {
         let stream = match &difference.stream {
             Stream::All => String::new(),
             Stream::Segment { field, value } => format!(", {field} {value}"),
@@ -47,10 +57,7 @@ fn verify(config: &Config) -> anyhow::Result<Done> {
         let (version, day) = (&difference.version, date(difference.day));
         say(format_args!("{version}, {day}{stream}: {}", difference.reason))?;
     }
-    if differences.is_empty() {
-        say("the summaries are what the records give")?;
-    }
-    Ok(Done::found(!differences.is_empty()))
+    Ok(())
 }
 
 fn backup(config: &Config, arguments: &LedgerBackupArgs) -> anyhow::Result<Done> {
@@ -66,6 +73,29 @@ fn restore_copy(config: &Config, arguments: &LedgerRestoreArgs) -> anyhow::Resul
     restore(&arguments.copy, &path)?;
     say(format_args!("restored to {}", path.display()))?;
     Ok(Done::Well)
+}
+
+/// Moves the ledger of the configuration to a PostgreSQL data base; the file stays as it is.
+fn move_ledger(config: &Config, arguments: &LedgerMoveArgs) -> anyhow::Result<Done> {
+    let LedgerUrl::Sqlite(from) = ledger_url(config)? else {
+        return Err(WrongUse("the ledger of this configuration is in PostgreSQL already".into()).into());
+    };
+    let to = LedgerUrl::parse(&arguments.to, &config.base).map_err(|error| WrongUse(error.to_string()))?;
+    let LedgerUrl::Postgres(address) = to else {
+        return Err(
+            WrongUse("a ledger moves to an address such as `postgres://user@host/name`".into()).into()
+        );
+    };
+    let moved = move_from_sqlite(&from, &address)?;
+    say(format_args!(
+        "moved {} records, {} outcomes, {} versions and {} summaries; now set `url` under [ledger]",
+        whole(moved.records as f64),
+        whole(moved.outcomes as f64),
+        moved.versions,
+        whole(moved.summaries as f64),
+    ))?;
+    tell_differences(&moved.differences)?;
+    Ok(Done::found(!moved.differences.is_empty()))
 }
 
 fn prune(config: &Config, arguments: &LedgerPruneArgs) -> anyhow::Result<Done> {

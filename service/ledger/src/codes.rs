@@ -1,5 +1,7 @@
 //! How things are written into columns.
 
+use std::borrow::Cow;
+
 use kilter_drift::Summary;
 
 use crate::error::LedgerError;
@@ -70,6 +72,44 @@ pub(crate) fn stream_from_columns(field: String, value: String) -> Stream {
     if field.is_empty() { Stream::All } else { Stream::Segment { field, value } }
 }
 
+/// Begins a replacement in [`without_nul`].
+const ESCAPE: char = '\u{E000}';
+
+/// A text for a column that cannot hold the character NUL. Two different texts stay different, and
+/// nearly all stay as they are.
+pub(crate) fn without_nul(text: &str) -> Cow<'_, str> {
+    if !text.contains(['\0', ESCAPE]) {
+        return Cow::Borrowed(text);
+    }
+    let mut escaped = String::with_capacity(text.len() + 8);
+    for character in text.chars() {
+        match character {
+            '\0' => escaped.extend([ESCAPE, '0']),
+            ESCAPE => escaped.extend([ESCAPE, '1']),
+            other => escaped.push(other),
+        }
+    }
+    Cow::Owned(escaped)
+}
+
+/// The text that [`without_nul`] was given.
+pub(crate) fn with_nul(text: String) -> String {
+    if !text.contains(ESCAPE) {
+        return text;
+    }
+    let mut pieces = text.split(ESCAPE);
+    let mut plain = pieces.next().unwrap_or_default().to_owned();
+    for piece in pieces {
+        let (nul, rest) = match piece.strip_prefix('0') {
+            Some(rest) => (true, rest),
+            None => (false, piece.strip_prefix('1').unwrap_or(piece)),
+        };
+        plain.push(if nul { '\0' } else { ESCAPE });
+        plain.push_str(rest);
+    }
+    plain
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;
@@ -80,6 +120,17 @@ mod tests {
         let again = floats_from_bytes(&floats_to_bytes(&values)).unwrap();
         assert!(values.iter().zip(&again).all(|(a, b)| a.to_bits() == b.to_bits()));
         assert!(floats_from_bytes(&[1, 2, 3]).is_err());
+    }
+
+    #[test]
+    fn texts_with_any_characters_come_back() {
+        let odd = ["", "S-1041", "\0", "a\0b", "\u{E000}", "\u{E000}0", "\0\u{E000}1", "\u{E000}\u{E000}\0"];
+        for text in odd {
+            let kept = without_nul(text);
+            assert!(!kept.contains('\0'), "{text:?}");
+            assert_eq!(with_nul(kept.clone().into_owned()), text);
+            assert!(odd.iter().filter(|other| without_nul(other) == kept).count() == 1, "{text:?}");
+        }
     }
 
     /// Stored hashes must never change. These were computed once with an independent
