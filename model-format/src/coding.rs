@@ -56,6 +56,11 @@ impl Coded {
         usable
     }
 
+    /// Values of one row as they are used, one per field.
+    pub fn value_row(&self, row: usize) -> Vec<f64> {
+        self.values.iter().map(|column| column[row]).collect()
+    }
+
     /// Values of one row as they came, one per field.
     pub fn input_row(&self, row: usize) -> Vec<f64> {
         self.inputs.iter().map(|column| column[row]).collect()

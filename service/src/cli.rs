@@ -124,6 +124,15 @@ pub(crate) struct ScoreArgs {
     /// File for refused rows, each with line, field and reason
     #[arg(long, value_name = "FILE")]
     pub(crate) refused: Option<PathBuf>,
+    /// Add an interval for each probability, from the joint covariance of the coefficients
+    #[arg(long, value_name = "LEVEL", num_args = 0..=1, default_missing_value = "0.95", require_equals = true)]
+    pub(crate) intervals: Option<f64>,
+    /// Add what each term adds to the log-odds of category A against category B
+    #[arg(long, value_name = "A,B")]
+    pub(crate) explain: Option<String>,
+    /// Write only the likeliest category, no probabilities
+    #[arg(long, conflicts_with = "intervals")]
+    pub(crate) top_only: bool,
 }
 
 #[derive(Debug, Args)]

@@ -14,6 +14,7 @@ fn arrows() -> BTreeMap<&'static str, BTreeSet<&'static str>> {
         ("kilter-drift", own(&["kilter-model"])),
         ("kilter-ledger", own(&["kilter-model", "kilter-drift"])),
         ("kilter", own(&["kilter-model", "kilter-tables", "kilter-fit", "kilter-drift", "kilter-ledger"])),
+        ("kilter-test-postgres", own(&[])),
         ("kilter-tests", own(&["kilter"])),
     ])
 }

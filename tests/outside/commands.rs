@@ -47,6 +47,49 @@ fn a_fit_without_its_data_fails_by_name() {
     assert!(run.err.contains("children") && run.err.contains("childern"), "{}", run.err);
 }
 
+/// Numbers of a scored table, by name of the column and row.
+fn scored(folder: &std::path::Path, options: &[&str]) -> Vec<std::collections::BTreeMap<String, String>> {
+    let arguments = [&["score", "out.model.json", "womenlf.csv"], options].concat();
+    let table = kilter_well(folder, &arguments);
+    let mut lines = table.lines();
+    let head: Vec<String> = lines.next().expect("a head").split(',').map(str::to_owned).collect();
+    lines.map(|line| head.iter().cloned().zip(line.split(',').map(str::to_owned)).collect()).collect()
+}
+
+/// Intervals enclose their probability, and the parts of an explanation sum to the log-odds.
+#[test]
+fn a_scored_table_may_hold_intervals_explanations_or_the_top_alone() {
+    let folder = tempfile::tempdir().expect("a folder");
+    let at = folder.path();
+    fit(at, "womenlf", plan_of("womenlf"));
+    let number = |row: &std::collections::BTreeMap<String, String>, name: &str| -> f64 {
+        row[name].parse().unwrap_or_else(|_| panic!("{name} is no number in {row:?}"))
+    };
+    let rows = scored(at, &["--intervals", "--explain", "fulltime,parttime"]);
+    assert_eq!(rows.len(), 263);
+    for row in &rows {
+        for category in ["not.work", "parttime", "fulltime"] {
+            let [p, low, high] = ["", "_low", "_high"].map(|end| number(row, &format!("p_{category}{end}")));
+            assert!(0.0 < low && low < p && p < high && high < 1.0, "{row:?}");
+        }
+        let terms = ["(intercept)", "hincome", "children=present"];
+        let sum: f64 = terms.map(|term| number(row, &format!("explain_{term}"))).iter().sum();
+        let odds = (number(row, "p_fulltime") / number(row, "p_parttime")).ln();
+        assert!((sum - odds).abs() < 1e-9, "{sum} {odds}");
+    }
+    let narrow = scored(at, &["--intervals=0.5"]);
+    assert!(number(&narrow[0], "p_fulltime_low") > number(&rows[0], "p_fulltime_low"));
+    let top = scored(at, &["--top-only"]);
+    assert!(top[0].contains_key("top") && !top[0].contains_key("p_fulltime"));
+    for wrong in
+        [&["--explain", "fulltime,partime"][..], &["--intervals=1.5"], &["--top-only", "--intervals"]]
+    {
+        let run = kilter(at, &[&["score", "out.model.json", "womenlf.csv", "-o", "s.csv"], wrong].concat());
+        assert_eq!(run.code, 64, "{wrong:?}: {}", run.err);
+        assert!(!at.join("s.csv").exists());
+    }
+}
+
 #[test]
 fn check_finds_a_changed_digit() {
     let folder = tempfile::tempdir().expect("a folder");

@@ -17,7 +17,7 @@ use crate::durable::{sync_folder, write_durably};
 use crate::metrics::Metrics;
 use crate::registry::Registry;
 use crate::scoring::{ScoredRecords, Version, refusal_in_a_word};
-use crate::tables::{borrowed, refused_columns, refused_values, scored_columns, scored_values};
+use crate::tables::{ScoredContent, ScoredTable, borrowed, refused_columns, refused_values};
 
 /// What became of a file.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize)]
@@ -227,7 +227,8 @@ impl<'a> Work<'a> {
     fn score(&mut self, version: &Version, reader: TableReader, result: &str) -> Result<(), ScoringError> {
         let scored = self.folder.sub("scored").join(result);
         let refused = self.folder.sub("refused").join(result);
-        let mut writer = TableWriter::create(&scored, &reader, &borrowed(&scored_columns(version)))?;
+        let table = ScoredTable::new(version, &ScoredContent::default())?;
+        let mut writer = TableWriter::create(&scored, &reader, &borrowed(&table.columns()))?;
         let mut refused_writer = TableWriter::create(&refused, &reader, &borrowed(&refused_columns()))?;
         for batch in reader {
             let batch = batch?;
@@ -235,7 +236,7 @@ impl<'a> Work<'a> {
             let rows: Vec<usize> = records.rows().collect();
             let given_ids = self.given_ids(&batch, &records, &rows);
             self.keep(version, &records, &rows, &given_ids)?;
-            writer.write(&batch, &rows, &scored_values(version, &records, &rows, &given_ids))?;
+            writer.write(&batch, &rows, &table.values(&records, &rows, &given_ids))?;
             let refusals = records.refused();
             let refused_rows: Vec<usize> = refusals.iter().map(|refusal| refusal.row).collect();
             refused_writer.write(&batch, &refused_rows, &refused_values(&batch, refusals))?;

@@ -9,15 +9,18 @@
 //! under way, the server is asked what became of the transaction before anything is done again.
 
 mod address;
+mod apart;
 mod applying;
 mod copy;
 mod difference;
 mod encryption;
 mod entries;
 mod files;
+mod moved_tables;
 mod moving;
 mod names;
 mod partitions;
+mod questions;
 mod raw;
 mod reader;
 mod rebuild;
@@ -35,6 +38,7 @@ use kilter_drift::SUMMARY_VERSION;
 use postgres::Transaction;
 
 pub use self::address::PostgresAddress;
+use self::apart::apart;
 pub use self::moving::{Moved, move_from_sqlite};
 use self::names::Names;
 use self::reader::PostgresReader;
@@ -105,9 +109,12 @@ impl PostgresStore {
 
     /// Opens a ledger whose data base is tried again for so long where it cannot be reached.
     pub(crate) fn with_patience(address: &PostgresAddress, patience: Duration) -> Result<Self, LedgerError> {
-        let mut session = Session::connect(address, Role::Writer, patience)?;
-        schema::bring_up_to_date(session.parts()?.0, address)?;
-        rebuild::rebuild(&mut session)?;
+        let session = apart(|| {
+            let mut session = Session::connect(address, Role::Writer, patience)?;
+            schema::bring_up_to_date(session.parts()?.0, address)?;
+            rebuild::rebuild(&mut session)?;
+            Ok::<_, LedgerError>(session)
+        })?;
         Ok(Self { address: address.clone(), patience, session: Some(session), cache: Cache::default() })
     }
 

@@ -1,6 +1,7 @@
 //! A fleet: replicas that share a PostgreSQL data base, of which some are killed, and a server that
 //! crashes, stops answering and comes back meanwhile.
 
+use std::ops::ControlFlow;
 use std::sync::Arc;
 use std::time::Duration;
 
@@ -184,4 +185,28 @@ fn encrypted_connections_are_verified() {
     let other_name = url.replace("localhost", "127.0.0.1");
     let refused = open(&other_name, &format!("?sslmode=require&{roots}"));
     assert!(matches!(refused, Err(LedgerError::Connect { .. })), "a certificate of another name");
+}
+
+/// Opening, reading, visiting and dropping wait for the server, and may be done in an asynchronous
+/// program all the same.
+#[test]
+fn a_ledger_may_be_used_in_an_asynchronous_program() {
+    let place = PostgresPlace::new();
+    let runtime = tokio::runtime::Builder::new_current_thread().build().unwrap();
+    runtime.block_on(async {
+        let ledger = Ledger::open(&crate::LedgerUrl::Postgres(place.address()), Settings::default()).unwrap();
+        let live = with_live(&ledger);
+        keep(&ledger, &live, (0..600).map(|i| record(&id_of(i), START, i)).collect());
+        for most in [5, 10_000] {
+            let mut visited = 0;
+            ledger
+                .records(MODEL, &live.fingerprint, [i64::MIN, i64::MAX], |_| {
+                    visited += 1;
+                    if visited == most { ControlFlow::Break(()) } else { ControlFlow::Continue(()) }
+                })
+                .unwrap();
+            assert_eq!(visited, most.min(600));
+        }
+        verified(&ledger);
+    });
 }

@@ -106,7 +106,8 @@ impl Expected {
 }
 
 pub(super) fn any_order_gives_the_same(first: &dyn Place) {
-    let mut runner = TestRunner::new(Config { cases: 48, failure_persistence: None, ..Config::default() });
+    let mut runner =
+        TestRunner::new(Config { cases: first.cases(), failure_persistence: None, ..Config::default() });
     let outcome = runner.run(&events(), |events| {
         let place = first.another();
         let mut ledger = place.open();

@@ -21,6 +21,11 @@ pub(super) trait Place {
     /// Ids of all records, and ids of all outcomes, each sorted; twice where they are there twice.
     fn ids(&self) -> [Vec<String>; 2];
 
+    /// How many random cases are tried here; a new data base takes longer than a new file.
+    fn cases(&self) -> u32 {
+        48
+    }
+
     /// A new place of the same kind.
     fn another(&self) -> Box<dyn Place>;
 
@@ -153,6 +158,10 @@ impl Place for PostgresPlace {
              ORDER BY id COLLATE \"C\"",
         ]
         .map(|sql| client.query(sql, &[]).unwrap().iter().map(|row| row.get(0)).collect())
+    }
+
+    fn cases(&self) -> u32 {
+        16
     }
 
     fn another(&self) -> Box<dyn Place> {
