@@ -6,12 +6,12 @@ use std::path::{Path, PathBuf};
 use kilter_drift::SUMMARY_VERSION;
 use rusqlite::{Connection, OptionalExtension, Row, params};
 
-use crate::codes::{stream_columns, stream_from_columns, summary_from_bytes};
 use super::index::{Kind, search};
 use super::names::category_name;
 use super::rows::{StoredOutcome, StoredRecord, load_outcome, load_record, raw_outcome};
 use super::writing::horizon;
 use super::{backup, raw, schema, verify};
+use crate::codes::{stream_columns, stream_from_columns, summary_from_bytes};
 use crate::error::LedgerError;
 use crate::store::Reader;
 use crate::types::{

@@ -7,8 +7,8 @@ use kilter_drift::{SUMMARY_VERSION, Summary};
 use rusqlite::{Connection, OptionalExtension, Transaction, params};
 
 use super::Cache;
-use crate::codes::{summary_from_bytes, summary_to_bytes};
 use super::rows::{StoredOutcome, StoredRecord, load_outcome, load_record, load_shadows};
+use crate::codes::{summary_from_bytes, summary_to_bytes};
 use crate::error::LedgerError;
 use crate::fold::{Case, Event, FoldedVersion, WindowKey};
 use crate::store::{Job, Reply};
