@@ -72,10 +72,6 @@ fn normal(random: &mut ChaCha8Rng) -> f64 {
 }
 
 impl Shape {
-    fn category(&self, place: usize) -> String {
-        format!("c{place}")
-    }
-
     /// Writes table and plan; the categories follow from the fields with moderate effects.
     fn write(&self, folder: &Path, random: &mut ChaCha8Rng) {
         let scales: Vec<f64> = (0..self.numbers).map(|_| 10f64.powi(random.random_range(-2..4))).collect();
@@ -110,7 +106,7 @@ impl Shape {
                 rest -= odds.exp();
                 rest < 0.0
             });
-            cells.push(self.category(drawn.unwrap_or(0)));
+            cells.push(format!("c{}", drawn.unwrap_or(0)));
             text.push_str(&(cells.join(",") + "\n"));
         }
         write(&folder.join("table.csv"), &text);
@@ -121,12 +117,10 @@ impl Shape {
         let mut plan = format!(
             "name = \"live\"\n[data]\nfiles = [\"table.csv\"]\n{count}[outcome]\nfield = \"y\"\nreference = \"c0\"\n"
         );
-        for k in 0..self.numbers {
-            plan.push_str(&format!("[[field]]\nname = \"x{k}\"\nkind = \"number\"\n"));
-        }
-        for k in 0..self.levels.len() {
-            plan.push_str(&format!("[[field]]\nname = \"g{k}\"\nkind = \"levels\"\nreference = \"l0\"\n"));
-        }
+        let numbers = (0..self.numbers).map(|k| format!("[[field]]\nname = \"x{k}\"\nkind = \"number\"\n"));
+        let levels = (0..self.levels.len())
+            .map(|k| format!("[[field]]\nname = \"g{k}\"\nkind = \"levels\"\nreference = \"l0\"\n"));
+        plan.extend(numbers.chain(levels));
         let ridge = self.ridge.map_or_else(String::new, |ridge| format!("ridge = {ridge}\n"));
         plan + &format!("[fit]\nstandard_errors = \"{standard_errors}\"\n{ridge}")
     }
@@ -213,7 +207,7 @@ fn fits_agree_with_statsmodels_and_scikit_learn_on_random_tables() {
     for (place, shape) in SHAPES.iter().enumerate() {
         let seed = seed() + place as u64;
         let what = format!("{} with seed {seed}", shape.name);
-        println!("{what}");
+        eprintln!("{what}");
         let folder = tempfile::tempdir().expect("a folder");
         let at = folder.path();
         shape.write(at, &mut ChaCha8Rng::seed_from_u64(seed));

@@ -80,14 +80,11 @@ impl Table {
         let mut text =
             "name = \"bench\"\n[data]\nfiles = [\"x\"]\n[outcome]\nfield = \"y\"\nreference = \"0\"\n"
                 .to_owned();
-        for number in 0..self.numbers.len() {
-            text.push_str(&format!("[[field]]\nname = \"x{number}\"\nkind = \"number\"\n"));
-        }
-        for number in 0..self.levels.len() - 1 {
-            text.push_str(&format!(
-                "[[field]]\nname = \"g{number}\"\nkind = \"levels\"\nreference = \"0\"\n"
-            ));
-        }
+        let numbers = (0..self.numbers.len())
+            .map(|number| format!("[[field]]\nname = \"x{number}\"\nkind = \"number\"\n"));
+        let levels = (0..self.levels.len() - 1)
+            .map(|number| format!("[[field]]\nname = \"g{number}\"\nkind = \"levels\"\nreference = \"0\"\n"));
+        text.extend(numbers.chain(levels));
         Plan::from_toml(&text).map_err(Into::into)
     }
 }

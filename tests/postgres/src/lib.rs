@@ -136,7 +136,7 @@ impl Cluster {
     fn wait(&self) {
         let begun = Instant::now();
         while let Err(error) = Client::connect(&self.address("postgres"), NoTls) {
-            assert!(begun.elapsed() < Duration::from_secs(60), "the server does not start: {error:?}");
+            assert!(begun.elapsed() < Duration::from_mins(1), "the server does not start: {error:?}");
             std::thread::sleep(Duration::from_millis(20));
         }
     }
